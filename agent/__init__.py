@@ -1,0 +1,1 @@
+"""The live agent: plant tags in; margins, findings and alarms out to one store."""

@@ -1,0 +1,1 @@
+"""Sources: plant tags to readings."""

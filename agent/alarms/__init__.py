@@ -1,0 +1,1 @@
+"""What is alarmed, by which rule, in which state."""

@@ -1,0 +1,1 @@
+"""What people asked and what the alarm system did, append-only."""

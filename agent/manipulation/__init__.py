@@ -1,0 +1,1 @@
+"""Readings to one frame per unit per tick; the running state."""

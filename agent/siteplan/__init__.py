@@ -1,0 +1,1 @@
+"""The site file, read once into frozen values."""

@@ -1,0 +1,1 @@
+"""Pages that show what the store holds."""

@@ -1,0 +1,1 @@
+"""Rows to plotly figures: pure, tested without a browser."""

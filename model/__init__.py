@@ -1,0 +1,1 @@
+"""What a reciprocating gas compressor should do, as pure functions on numpy arrays."""

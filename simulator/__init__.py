@@ -1,0 +1,1 @@
+"""An invented plant with its own physics, for demos and tests."""
