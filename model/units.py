@@ -164,9 +164,18 @@ def _asked_of_pint(word: str, si: str) -> float | None:
 
     spelled = re.sub(r"(?<=[A-Za-z_])([0-9])", r"**\1", word)
     try:
-        return float(_registry().Quantity(1.0, spelled).to(si).magnitude)
-    except (pint.PintError, pint.DefinitionSyntaxError, AttributeError, TypeError, ValueError):
-        return None
+        factor = float(_registry().Quantity(1.0, spelled).to(si).magnitude)
+    except (
+        pint.PintError,
+        ArithmeticError,
+        AssertionError,
+        AttributeError,
+        LookupError,
+        TypeError,
+        ValueError,
+    ):
+        return None  # not a unit, not of this dimension, or two prefixes that could be meant
+    return factor if factor > 0 and math.isfinite(factor) else None
 
 
 def split(text: str) -> tuple[float, str]:
