@@ -15,8 +15,8 @@ from typing import Any, Final
 from model.unit_table import DIMENSIONS, PRESSURE_BASES, Conversion, Dimension
 
 __all__ = [
-    "NO_VALUE", "Conversion", "UnitError", "conversion", "dimensions", "format_value", "format_with_unit",
-    "known_units", "parse", "parse_range", "split", "unit_label",
+    "NO_VALUE", "Conversion", "UnitError", "conversion", "dimensions", "example", "format_value",
+    "format_with_unit", "known_units", "parse", "parse_range", "split", "unit_label", "words",
 ]  # fmt: skip
 
 NO_VALUE: Final = "–"
@@ -54,6 +54,16 @@ def known_units(dimension: str) -> tuple[str, ...]:
     if dimension == "pressure":
         return tuple(f"{base}{'' if base != 'Pa' else ' '}{ref}" for base, ref in _pressure_words())
     return tuple(DIMENSIONS[dimension].units)
+
+
+def words(dimension: str) -> str:
+    """The dimension in words, with its article: "a length"."""
+    return DIMENSIONS[dimension].words
+
+
+def example(dimension: str) -> str:
+    """The dimension in words with an example of how to write it: "a length, e.g. 195 mm"."""
+    return f"{DIMENSIONS[dimension].words}, e.g. {DIMENSIONS[dimension].example}"
 
 
 def _pressure_words() -> tuple[tuple[str, str], ...]:

@@ -6,7 +6,7 @@ from enum import StrEnum
 from zoneinfo import ZoneInfo
 
 from model.machine import Unit
-from model.quantities import Kind, QUANTITIES, Scope, UNCERTAINTY_SUFFIX, series_name
+from model.quantities import QUANTITIES, UNCERTAINTY_SUFFIX, Kind, Scope, series_name
 
 
 class SourceKind(StrEnum):
@@ -99,7 +99,7 @@ class UnitPlan:
         return tuple(i.name for i in self.inputs)
 
     def result_names(self) -> tuple[str, ...]:
-        """Every series the agent derives for this unit, in glossary order; the store's column order starts here."""
+        """Every series the agent derives for this unit, in glossary order; the store starts with it."""
         subjects = {
             Scope.UNIT: ("unit",),
             Scope.STAGE: tuple(s.subject for s in self.unit.stages),
@@ -128,6 +128,7 @@ class SitePlan:
     units: tuple[UnitPlan, ...]
     text: str  # the file as read; stored beside what it computed
     digest: str  # of the text
+    notices: tuple[str, ...] = ()  # nothing wrong, but worth knowing
 
     @property
     def zone(self) -> ZoneInfo:

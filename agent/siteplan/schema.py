@@ -1,0 +1,220 @@
+"""The blocks of a site file: which keys they take and what each value must be.
+
+Each block is checked by itself, so that one wrong value hides no other. What blocks must say to each other
+(a limit on a cylinder that exists, an input of a declared source) is checked where the plan is built.
+"""
+
+import re
+from typing import Annotated, Any, Final, Literal
+
+from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, StrictBool, ValidationInfo
+
+from agent.siteplan.errors import ValueRefusedError
+from agent.siteplan.plan import MqttVersion, SourceKind
+from model import units
+
+SCHEMA: Final = 1  # the newest form of the file that this version reads
+
+# The same words as the gas model's, which this room does not import: a test holds both equal.
+COMPONENTS: Final = (
+    "methane", "ethane", "propane", "n-butane", "isobutane", "n-pentane", "isopentane", "n-hexane",
+    "n-heptane", "n-octane", "n-nonane", "n-decane", "nitrogen", "carbon dioxide", "hydrogen",
+    "hydrogen sulfide", "water", "carbon monoxide", "oxygen", "helium", "argon",
+)  # fmt: skip
+
+
+def _parsed(value: Any, dimension: str, info: ValidationInfo) -> float:
+    if not isinstance(value, str):
+        raise ValueRefusedError(units.example(dimension))
+    barometer = (info.context or {}).get("barometer_pa")
+    try:
+        return units.parse(value, dimension, barometer_pa=barometer)
+    except units.UnitError as error:
+        raise ValueRefusedError(error.expected, error.hint) from None
+
+
+def _si(dimension: str, low: str, high: str) -> BeforeValidator:
+    """Text to SI, within bounds that only a slip of the pen leaves."""
+    least, most = units.parse(low, dimension), units.parse(high, dimension)
+
+    def check(value: Any, info: ValidationInfo) -> float:
+        number = _parsed(value, dimension, info)
+        if not least <= number <= most:
+            raise ValueRefusedError(f"{units.words(dimension)} from {low} to {high}")
+        return number
+
+    return BeforeValidator(check)
+
+
+def _range(dimension: str) -> BeforeValidator:
+    def check(value: Any, info: ValidationInfo) -> tuple[float, float]:
+        if not isinstance(value, str):
+            raise ValueRefusedError("two values with 'to' between them")
+        barometer = (info.context or {}).get("barometer_pa")
+        try:
+            return units.parse_range(value, dimension, barometer_pa=barometer)
+        except units.UnitError as error:
+            raise ValueRefusedError(error.expected, error.hint) from None
+
+    return BeforeValidator(check)
+
+
+def _pattern(pattern: str, expected: str) -> BeforeValidator:
+    compiled = re.compile(pattern)
+
+    def check(value: Any) -> str:
+        if not isinstance(value, str) or not compiled.fullmatch(value.strip()):
+            raise ValueRefusedError(expected)
+        return value.strip()
+
+    return BeforeValidator(check)
+
+
+def _clearance(value: Any, info: ValidationInfo) -> float:
+    number = _parsed(value, "fraction", info)
+    if not 0 < number <= 3:
+        raise ValueRefusedError(
+            "a clearance above 0 % and up to 300 % of the swept volume", "write 16 % or 0.16"
+        )
+    return number
+
+
+Text = Annotated[str, _pattern(r"(?s).*\S.*", "some text")]
+Identity = Annotated[
+    str, _pattern(r"[A-Za-z0-9][A-Za-z0-9_-]{0,39}", "letters, digits, - and _, at most 40, e.g. K-110")
+]
+FieldName = Annotated[str, _pattern(r"\S+", "the name of a field, e.g. value")]
+Count = Annotated[int, Field(ge=1, le=99)]
+Bore = Annotated[float, _si("length", "20 mm", "2 m")]
+Rod = Annotated[float, _si("length", "5 mm", "1 m")]
+Stroke = Annotated[float, _si("length", "20 mm", "1 m")]
+ConnectingRod = Annotated[float, _si("length", "20 mm", "5 m")]
+RatedSpeed = Annotated[float, _si("rotation", "50 rpm", "3600 rpm")]
+MovingMass = Annotated[float, _si("mass", "0.5 kg", "20000 kg")]
+ValveFrequency = Annotated[float, _si("frequency", "5 Hz", "2000 Hz")]
+ValveArea = Annotated[float, _si("area", "1 mm2", "1 m2")]
+Clearance = Annotated[float, BeforeValidator(_clearance)]
+Barometer = Annotated[float, _si("pressure", "0.6 bara", "1.1 bara")]
+Temperature = Annotated[float, _si("temperature", "100 K", "1000 K")]
+Pressure = Annotated[float, _si("pressure", "0.1 bara", "2000 bara")]
+StaleLimit = Annotated[float, _si("time", "1 s", "1 d")]
+Delay = Annotated[float, _si("time", "0 s", "1 d")]
+
+
+class Block(BaseModel):
+    """A block of keys; an unknown key is a fault, never ignored."""
+
+    model_config = ConfigDict(extra="forbid", frozen=True)
+
+
+class FileBlock(Block):
+    schema_: Annotated[int, Field(alias="schema", ge=1)]
+    site: Any
+    sources: dict[str, Any]
+    units: Annotated[list[Any], Field(min_length=1)]
+
+
+class SiteBlock(Block):
+    name: Text
+    time_zone: Text
+    barometer: Barometer
+    simulated: StrictBool = False
+
+
+class SourceBlock(Block):
+    kind: SourceKind
+    address: Text
+    mqtt_version: MqttVersion | None = None
+    client_id: Text | None = None
+    topics: Annotated[list[Text], Field(min_length=1)] | None = None
+    value_field: FieldName | None = None
+    time_field: FieldName | None = None
+    quality_field: FieldName | None = None
+
+
+class UnitBlock(Block):
+    id: Identity
+    name: Text
+    service: Text
+    frame: Any
+    gas: Any
+    stages: Annotated[list[Any], Field(min_length=1)]
+    load_steps: Annotated[list[Any], Field(min_length=1)]
+    limits: list[Any] = []
+    alarms: dict[str, Any] = {}
+    flow_reference: Any = None
+    inputs: Annotated[list[Any], Field(min_length=1)]
+
+
+class FrameBlock(Block):
+    stroke: Stroke
+    connecting_rod: ConnectingRod
+    rated_speed: RatedSpeed
+
+
+class GasBlock(Block):
+    composition: Annotated[dict[str, Annotated[float, Field(ge=0, le=1)]], Field(min_length=1)]
+    temperature_range: Annotated[tuple[float, float], _range("temperature")]
+    pressure_range: Annotated[tuple[float, float], _range("pressure")]
+
+
+class StageBlock(Block):
+    number: Count
+    cylinders: Annotated[list[Any], Field(min_length=1)]
+
+
+class CylinderBlock(Block):
+    number: Count
+    bore: Bore
+    rod: Rod
+    tail_rod: Rod | None = None
+    reciprocating_mass: MovingMass
+    valve_natural_frequency: ValveFrequency
+    ends: dict[Literal["head", "crank"], Any]
+
+
+class EndBlock(Block):
+    clearance: Clearance
+    suction_valve_area: ValveArea
+    discharge_valve_area: ValveArea
+
+
+class LoadStepBlock(Block):
+    word: Text
+    held_open: list[Text]
+    permitted: StrictBool = True
+
+
+class LimitBlock(Block):
+    quantity: Text
+    of: Text
+    value: Text  # its dimension is that of the quantity
+    source: Text
+    entered_by: Text
+
+
+class AlarmBlock(Block):
+    setting: Text | None = None
+    deadband: Text | None = None
+    on_delay: Delay | None = None
+
+
+class FlowReferenceBlock(Block):
+    temperature: Temperature
+    pressure: Pressure
+    dry: StrictBool
+
+
+class InputBlock(Block):
+    quantity: Text
+    of: Text
+    tag: Text
+    source: Text
+    address: Text
+    unit: Text
+    span: Text | None = None
+    accuracy: Text | None = None
+    tap: Text
+    stale_after: StaleLimit
+    updates: Literal["periodically", "on change"] = "periodically"
+    required: StrictBool = True
