@@ -19,7 +19,7 @@ app = typer.Typer(
     no_args_is_help=True,
     add_completion=False,
     pretty_exceptions_enable=False,
-    help="Watch reciprocating gas compressors from slow plant tags. Advisory only; nothing is ever written to a plant.",
+    help="Watch reciprocating gas compressors from slow plant tags. Advisory only; never writes to a plant.",
 )
 
 SiteFile = Annotated[Path, typer.Argument(help="The site file (YAML).", show_default=False)]
@@ -93,7 +93,9 @@ def dashboard(
 def demo(
     pace: Annotated[float, typer.Option(help="Hurry the story by this factor.", min=0.1, max=60)] = 1.0,
     port: Annotated[int, typer.Option(help="Port of the pages; a free one is taken if it is in use.")] = 8050,
-    keep: Annotated[Path | None, typer.Option(help="Keep the data in this folder.", show_default=False)] = None,
+    keep: Annotated[
+        Path | None, typer.Option(help="Keep the data in this folder.", show_default=False)
+    ] = None,
 ) -> None:
     """Start an invented plant, the agent and the pages on this machine, loopback only."""
     from simulator.demo import run  # noqa: PLC0415

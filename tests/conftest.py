@@ -4,8 +4,9 @@ import os
 import shutil
 from pathlib import Path
 
-import model
 import pytest
+
+import model
 
 ROOT = Path(__file__).resolve().parents[1]
 

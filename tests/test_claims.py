@@ -23,7 +23,9 @@ def collected() -> frozenset[str]:
 
 
 @pytest.mark.parametrize("claim", CLAIMS, ids=lambda c: c["name"])
-def test_claim_is_complete_and_names_what_shows_it(claim: dict[str, object], collected: frozenset[str]) -> None:
+def test_claim_is_complete_and_names_what_shows_it(
+    claim: dict[str, object], collected: frozenset[str]
+) -> None:
     assert claim["sentence"]
     assert claim["figure"]
     assert isinstance(claim["date"], date)

@@ -1,4 +1,4 @@
-"""Memory and processor use of the whole demo, ten minutes after its start (Linux: sums PSS over the process tree)."""
+"""Memory and processor use of the whole demo ten minutes after its start (Linux: PSS of the process tree)."""
 
 import argparse
 import signal
@@ -26,9 +26,9 @@ def _pss_mb(processes: Sequence[psutil.Process]) -> dict[str, float]:
 
 def _label(process: psutil.Process) -> str:
     words = process.cmdline()
-    return next((w for w in words if w in {"agent", "dashboard"} and words[words.index(w) - 1] != "-m"), None) or next(
-        (w for w in words if w.startswith("simulator.")), "demo"
-    )
+    return next(
+        (w for w in words if w in {"agent", "dashboard"} and words[words.index(w) - 1] != "-m"), None
+    ) or next((w for w in words if w.startswith("simulator.")), "demo")
 
 
 def _cpu_seconds(processes: Sequence[psutil.Process]) -> float:
@@ -41,7 +41,10 @@ def main(argv: Sequence[str]) -> int:
     minutes = parser.parse_args(argv).minutes
     with tempfile.TemporaryDirectory() as folder:
         demo = subprocess.Popen(
-            [sys.executable, "-P", "-m", "agent", "demo"], cwd=folder, stdout=subprocess.DEVNULL, stderr=subprocess.DEVNULL
+            [sys.executable, "-P", "-m", "agent", "demo"],
+            cwd=folder,
+            stdout=subprocess.DEVNULL,
+            stderr=subprocess.DEVNULL,
         )
         try:
             time.sleep(minutes * 60 - 60)

@@ -148,7 +148,9 @@ class House:
         return process
 
     def pages(self) -> Process:
-        command = python("agent", "dashboard", str(self.site), "--data", str(self.data), "--port", str(self.page_port))
+        command = python(
+            "agent", "dashboard", str(self.site), "--data", str(self.data), "--port", str(self.page_port)
+        )
         process = self._add("pages", command)
         wait_for("pages", lambda: _listens(self.page_port))
         return process
