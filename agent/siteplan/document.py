@@ -16,6 +16,7 @@ from ruamel.yaml.nodes import MappingNode, ScalarNode, SequenceNode
 from agent.siteplan.errors import Fault, SiteFileError
 
 Place = tuple[str | int, ...]
+Mark = tuple[int, int]  # line and column, from 1
 
 _LARGEST_BYTES: Final = 4_000_000
 _MOST_VALUES: Final = 200_000  # aliases of aliases can ask for more than any memory holds
@@ -25,19 +26,22 @@ _TAG: Final = "tag:yaml.org,2002:"
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Document:
-    """``lines`` holds the line of every value; a merged value stands where its anchor was written."""
+    """``marks`` holds where every value stands; a merged value stands where its anchor was written."""
 
     file: str
     text: str
     values: dict[str, Any]
-    lines: dict[Place, int]
+    marks: dict[Place, Mark]
     faults: tuple[Fault, ...]  # duplicate and odd keys
 
-    def line(self, place: Place) -> int:
-        """Line of a value, or of the nearest thing around it."""
-        while place not in self.lines and place:
+    def mark(self, place: Place) -> Mark:
+        """Line and column of a value, or of the nearest thing around it."""
+        while place not in self.marks and place:
             place = place[:-1]
-        return self.lines.get(place, 0)
+        return self.marks.get(place, (0, 0))
+
+    def line(self, place: Place) -> int:
+        return self.mark(place)[0]
 
 
 def dotted(place: Place) -> str:
@@ -97,7 +101,7 @@ def _document(file: str, text: str) -> Document:
         raise _whole(file, "keys with their values, e.g. 'schema: 1'", line=1)
     builder = _Builder(file)
     values = builder.value(node, ())
-    return Document(file=file, text=text, values=values, lines=builder.lines, faults=tuple(builder.faults))
+    return Document(file=file, text=text, values=values, marks=builder.marks, faults=tuple(builder.faults))
 
 
 class _Builder:
@@ -105,7 +109,7 @@ class _Builder:
 
     def __init__(self, file: str) -> None:
         self.file = file
-        self.lines: dict[Place, int] = {}
+        self.marks: dict[Place, Mark] = {}
         self.faults: list[Fault] = []
         self._count = 0
         self._inside: list[int] = []  # the nodes we are in: an alias of one of them would never end
@@ -120,7 +124,7 @@ class _Builder:
 
     def _enter(self, node: Any) -> None:
         self._count += len(node.value)
-        line = node.start_mark.line + 1
+        line = _mark(node)[0]
         if self._count > _MOST_VALUES or len(self._inside) > _DEEPEST:
             raise _whole(self.file, "a smaller site file", f"at most {_MOST_VALUES} values", line)
         if id(node) in self._inside:
@@ -129,7 +133,7 @@ class _Builder:
 
     def _items(self, node: Any, place: Place) -> list[Any]:
         for number, item in enumerate(node.value):
-            self.lines[(*place, number)] = item.start_mark.line + 1
+            self.marks[(*place, number)] = _mark(item)
         return [self.value(item, (*place, number)) for number, item in enumerate(node.value)]
 
     def _keys(self, node: Any, place: Place) -> dict[str, Any]:
@@ -141,16 +145,16 @@ class _Builder:
                 content |= self._merged(value_node, place)
         seen: set[str] = set()
         for key_node, value_node in pairs:
-            line = key_node.start_mark.line + 1
+            mark = _mark(key_node)
             if not isinstance(key_node, ScalarNode):
-                self._fault(line, place, "a plain word as key")
+                self._fault(mark[0], place, "a plain word as key")
                 continue
             key = str(key_node.value)
             if key in seen:
-                self._fault(line, (*place, key), "each key once", "it stands twice here")
+                self._fault(mark[0], (*place, key), "each key once", "it stands twice here")
                 continue
             seen.add(key)
-            self.lines[(*place, key)] = line
+            self.marks[(*place, key)] = mark
             content[key] = self.value(value_node, (*place, key))
         return content
 
@@ -161,13 +165,17 @@ class _Builder:
             if isinstance(source, MappingNode):
                 content |= self.value(source, place)
             else:
-                self._fault(source.start_mark.line + 1, (*place, "<<"), "an alias of keys with their values")
+                self._fault(_mark(source)[0], (*place, "<<"), "an alias of keys with their values")
         return content
 
     def _fault(self, line: int, place: Place, expected: str, hint: str = "") -> None:
         fault = Fault(file=self.file, line=line, path=dotted(place), value="", expected=expected, hint=hint)
         if (line, expected) not in [(f.line, f.expected) for f in self.faults]:
             self.faults.append(fault)  # an alias would repeat the fault of its anchor
+
+
+def _mark(node: Any) -> Mark:
+    return node.start_mark.line + 1, node.start_mark.column + 1
 
 
 def _scalar(node: Any) -> str | bool | None:

@@ -67,13 +67,11 @@ def _read_input(
     quantity = QUANTITIES[block.quantity]
     subject = _note_name(reader, place, has, taken)
     there = _conversion(reader, place, block, quantity)
-    if there is None:
-        return None
     span = _span(reader, place, block, quantity)
     accuracy = _accuracy(reader, place, block, quantity, span)
     if quantity.key in _NEEDED and not block.required:
         reader.fault((*place, "required"), "true", f"the model needs the {quantity.words} of every stage")
-    if subject is None or span is None or accuracy is None or len(reader.faults) > before:
+    if there is None or subject is None or span is None or accuracy is None or len(reader.faults) > before:
         return None
     return Input(
         quantity=quantity.key, subject=subject, tag=block.tag, source=block.source, address=block.address,
@@ -96,6 +94,8 @@ def _note_name(reader: Reader, place: Place, has: Declared, taken: Taken) -> str
                 "'unit'" if scope is Scope.UNIT else f"one {scope.value} of this unit, e.g. '{scope.value} 1'"
             )
             reader.fault((*place, "of"), one)
+        for subject in named:  # meant, if not said: nobody is told that they are missing
+            taken.subjects.setdefault(series_name(subject, key), place)
         return None
     first = taken.subjects.setdefault(series_name(named[0], key), place)
     if first != place:
@@ -212,6 +212,8 @@ def _accuracy(
 
 
 def _needed_by_stages(reader: Reader, place: Place, has: Declared, taken: Taken) -> None:
+    if reader.count(place) == 0:
+        return  # told already
     for subject in has.subjects(Scope.STAGE):
         for key in _NEEDED:
             if series_name(subject, key) not in taken.subjects and has.sure:
@@ -237,5 +239,7 @@ def read_flow_reference(reader: Reader, unit_place: Place, inputs: Sequence[Inpu
         same = abs(block.temperature - state[0]) < 0.5 and abs(block.pressure - state[1]) < 100
         if not same:
             shown = f"{state[0] - 273.15:.4g} degC, {state[1] / 1e5:.5f} bara"
-            reader.fault(place, f"the state that {flow.unit} of tag {flow.tag} has in its name, {shown}")
+            reader.fault(
+                place, f"the state that {flow.unit} of tag {flow.tag} has in its name, {shown}", value=""
+            )
     return FlowReference(temperature_k=block.temperature, pressure_pa=block.pressure, dry=block.dry)

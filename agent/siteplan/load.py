@@ -5,7 +5,6 @@ reading lists everything.
 """
 
 import hashlib
-import zoneinfo
 from collections.abc import Mapping
 from dataclasses import replace
 from pathlib import Path
@@ -94,9 +93,6 @@ def _site(reader: Reader) -> SiteBlock | None:
     site = reader.block(SiteBlock, place) if reader.at(place) is not None else None
     # Without a barometer the rest is still checked; the missing one is a fault by itself.
     reader.barometer_pa = site.barometer if site is not None else _SEA_LEVEL_PA
-    if site is not None and site.time_zone not in zoneinfo.available_timezones():
-        hint = closest(site.time_zone, zoneinfo.available_timezones())
-        reader.fault((*place, "time_zone"), "a time zone of the IANA list, e.g. Europe/Copenhagen", hint)
     return site
 
 

@@ -105,9 +105,8 @@ def _read_cylinder(reader: Reader, place: Place, seen: dict[int, Place]) -> Cyli
         reciprocating_mass_kg=block.reciprocating_mass, ends=(),
         valve_natural_frequency_hz=block.valve_natural_frequency,
     )  # fmt: skip
-    if not block.ends:
-        reader.fault((*place, "ends"), "an end: head, crank or both")
-        return None
+    if reader.at((*place, "ends")) == {}:
+        reader.fault((*place, "ends"), "an end: head, crank or both", value="")
     read = [
         _read_end(reader, (*place, "ends", side.value), bare, side)
         for side in Side
@@ -158,7 +157,7 @@ def read_load_steps(reader: Reader, place: Place, has: Declared) -> tuple[LoadSt
         seen.setdefault(block.word, (*here, "word"))
         held = _held_open(reader, (*here, "held_open"), block.held_open, has)
         steps.append(LoadStep(word=block.word, index=index, held_open=held, permitted=block.permitted))
-    if len(steps) == reader.count(place) and not any(step.permitted for step in steps):
+    if steps and len(steps) == reader.count(place) and not any(step.permitted for step in steps):
         reader.fault(place, "a load step that is permitted", value="")
     return tuple(steps)
 

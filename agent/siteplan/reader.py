@@ -4,14 +4,15 @@ import difflib
 from collections.abc import Iterable
 from typing import Any, TypeVar
 
-from pydantic import BaseModel, ValidationError
+from pydantic import ValidationError
 from pydantic_core import ErrorDetails
 
-from agent.siteplan.document import Document, Place, dotted
+from agent.siteplan.document import Document, Mark, Place, dotted
 from agent.siteplan.errors import Fault, ValueRefusedError
+from agent.siteplan.schema import Block
 from model import units
 
-BlockT = TypeVar("BlockT", bound=BaseModel)
+BlockT = TypeVar("BlockT", bound=Block)
 
 # Words of pydantic's error types, in ours.
 _EXPECTED = {
@@ -46,6 +47,7 @@ class Reader:
         self.faults = list(document.faults)
         self.notices: list[str] = []
         self.barometer_pa: float | None = None
+        self._told: set[tuple[Mark, str | int, str, str]] = set()
 
     def at(self, place: Place) -> Any:
         """The raw value at a place, None where there is none."""
@@ -63,12 +65,18 @@ class Reader:
         return len(value) if isinstance(value, list) else 0
 
     def fault(self, place: Place, expected: str, hint: str = "", value: str | None = None) -> None:
-        written = self.at(place)
-        shown = value if value is not None else _written(written)
+        """Note that the value at a place is not what was expected; ``value`` replaces what is shown of it."""
+        shown = _written(self.at(place)) if value is None else value
+        mark = self.document.mark(place)
+        # Two cylinders that share an anchor share its faults: they are told once.
+        same = (mark, place[-1] if place else "", shown, expected)
+        if same in self._told:
+            return
+        self._told.add(same)
         self.faults.append(
             Fault(
                 file=self.document.file,
-                line=self.document.line(place),
+                line=mark[0],
                 path=dotted(place),
                 value=shown,
                 expected=expected,
@@ -81,15 +89,29 @@ class Reader:
             self.notices.append(text)
 
     def block(self, model: type[BlockT], place: Place) -> BlockT | None:
-        """The block at a place, or None after its faults were noted."""
+        """The block at a place after its faults were noted.
+
+        Keys with faults are replaced by the stand-ins of the block, so that its other keys can be checked
+        against each other and against the rest of the file; without a stand-in there is no block.
+        """
+        raw = self.at(place)
+        context = {"barometer_pa": self.barometer_pa}
         try:
-            return model.model_validate(self.at(place), context={"barometer_pa": self.barometer_pa})
+            return model.model_validate(raw, context=context)
         except ValidationError as error:
+            wrong = {str(details["loc"][0]) for details in error.errors() if details["loc"]}
             for details in error.errors(include_url=False):
                 self._schema_fault(model, place, details)
+        if not isinstance(raw, dict):
+            return None
+        rest = {key: value for key, value in raw.items() if key not in wrong}
+        stand_ins = {key: value for key, value in model.stand_ins.items() if key not in rest}
+        try:
+            return model.model_validate(rest | stand_ins, context=context)
+        except ValidationError:
             return None
 
-    def _schema_fault(self, model: type[BaseModel], place: Place, details: ErrorDetails) -> None:
+    def _schema_fault(self, model: type[Block], place: Place, details: ErrorDetails) -> None:
         here = (*place, *(step for step in details["loc"] if step != "[key]"))
         kind = details["type"]
         if kind == "missing":
@@ -99,7 +121,7 @@ class Reader:
             known = [f.alias or name for name, f in model.model_fields.items()]
             secret = any(part in word.lower() for part in _SECRETS)
             hint = "secrets never stand in the site file" if secret else closest(word, known)
-            self.fault(here, "no such key", hint, value="…" if secret else None)
+            self.fault(here, "a known key", hint, value="")
         else:
             expected, hint = _expectation(details)
             self.fault(here, expected, hint)

@@ -4,10 +4,14 @@ Each block is checked by itself, so that one wrong value hides no other. What bl
 (a limit on a cylinder that exists, an input of a declared source) is checked where the plan is built.
 """
 
+import difflib
 import re
-from typing import Annotated, Any, Final, Literal
+import zoneinfo
+from collections.abc import Mapping
+from types import MappingProxyType
+from typing import Annotated, Any, ClassVar, Final, Literal
 
-from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, StrictBool, ValidationInfo
+from pydantic import AfterValidator, BaseModel, BeforeValidator, ConfigDict, Field, StrictBool, ValidationInfo
 
 from agent.siteplan.errors import ValueRefusedError
 from agent.siteplan.plan import MqttVersion, SourceKind
@@ -71,12 +75,27 @@ def _pattern(pattern: str, expected: str) -> BeforeValidator:
 
 
 def _clearance(value: Any, info: ValidationInfo) -> float:
+    return _fraction(value, info, "a clearance above 0 % and up to 300 % of the swept volume", 1e-9, 3.0)
+
+
+def _share(value: Any, info: ValidationInfo) -> float:
+    return _fraction(value, info, "a mole fraction from 0 to 1", 0.0, 1.0)
+
+
+def _fraction(value: Any, info: ValidationInfo, expected: str, low: float, high: float) -> float:
     number = _parsed(value, "fraction", info)
-    if not 0 < number <= 3:
-        raise ValueRefusedError(
-            "a clearance above 0 % and up to 300 % of the swept volume", "write 16 % or 0.16"
-        )
+    if not low <= number <= high:
+        raise ValueRefusedError(expected, f"write {value.strip()} %" if high < number <= 100 * high else "")
     return number
+
+
+def _time_zone(value: str) -> str:
+    known = zoneinfo.available_timezones()
+    if value not in known:
+        near = difflib.get_close_matches(value, known, n=1)
+        hint = f"did you mean {near[0]}?" if near else ""
+        raise ValueRefusedError("a time zone of the IANA list, e.g. Europe/Copenhagen", hint)
+    return value
 
 
 Text = Annotated[str, _pattern(r"(?s).*\S.*", "some text")]
@@ -102,9 +121,14 @@ Delay = Annotated[float, _si("time", "0 s", "1 d")]
 
 
 class Block(BaseModel):
-    """A block of keys; an unknown key is a fault, never ignored."""
+    """A block of keys; an unknown key is a fault, never ignored.
+
+    ``stand_ins`` are values that offend nothing. They take the place of wrong ones so that the rest of the
+    block can still be checked; a file with a fault never becomes a plan.
+    """
 
     model_config = ConfigDict(extra="forbid", frozen=True)
+    stand_ins: ClassVar[Mapping[str, Any]] = MappingProxyType({})
 
 
 class FileBlock(Block):
@@ -115,8 +139,9 @@ class FileBlock(Block):
 
 
 class SiteBlock(Block):
+    stand_ins = MappingProxyType({"name": "-", "time_zone": "UTC"})
     name: Text
-    time_zone: Text
+    time_zone: Annotated[Text, AfterValidator(_time_zone)]
     barometer: Barometer
     simulated: StrictBool = False
 
@@ -147,23 +172,37 @@ class UnitBlock(Block):
 
 
 class FrameBlock(Block):
+    stand_ins = MappingProxyType({"stroke": "20 mm", "connecting_rod": "5 m", "rated_speed": "50 rpm"})
     stroke: Stroke
     connecting_rod: ConnectingRod
     rated_speed: RatedSpeed
 
 
 class GasBlock(Block):
-    composition: Annotated[dict[str, Annotated[float, Field(ge=0, le=1)]], Field(min_length=1)]
+    stand_ins = MappingProxyType(
+        {"temperature_range": "1 K to 5000 K", "pressure_range": "1 bara to 9999 bara"}
+    )
+    composition: Annotated[dict[str, Annotated[float, BeforeValidator(_share)]], Field(min_length=1)]
     temperature_range: Annotated[tuple[float, float], _range("temperature")]
     pressure_range: Annotated[tuple[float, float], _range("pressure")]
 
 
 class StageBlock(Block):
+    stand_ins = MappingProxyType({"cylinders": [None]})
     number: Count
     cylinders: Annotated[list[Any], Field(min_length=1)]
 
 
 class CylinderBlock(Block):
+    stand_ins = MappingProxyType(
+        {
+            "bore": "2 m",
+            "rod": "5 mm",
+            "reciprocating_mass": "1 kg",
+            "valve_natural_frequency": "9 Hz",
+            "ends": {},
+        }
+    )
     number: Count
     bore: Bore
     rod: Rod
@@ -174,18 +213,23 @@ class CylinderBlock(Block):
 
 
 class EndBlock(Block):
+    stand_ins = MappingProxyType(
+        {"clearance": "1 %", "suction_valve_area": "1 mm2", "discharge_valve_area": "1 mm2"}
+    )
     clearance: Clearance
     suction_valve_area: ValveArea
     discharge_valve_area: ValveArea
 
 
 class LoadStepBlock(Block):
+    stand_ins = MappingProxyType({"held_open": []})
     word: Text
     held_open: list[Text]
     permitted: StrictBool = True
 
 
 class LimitBlock(Block):
+    stand_ins = MappingProxyType({"source": "-", "entered_by": "-"})
     quantity: Text
     of: Text
     value: Text  # its dimension is that of the quantity
@@ -200,12 +244,14 @@ class AlarmBlock(Block):
 
 
 class FlowReferenceBlock(Block):
+    stand_ins = MappingProxyType({"dry": True})
     temperature: Temperature
     pressure: Pressure
     dry: StrictBool
 
 
 class InputBlock(Block):
+    stand_ins = MappingProxyType({"tag": "-", "tap": "-", "stale_after": "1 s"})
     quantity: Text
     of: Text
     tag: Text

@@ -3,14 +3,14 @@
 import re
 from collections.abc import Mapping
 from typing import Final
-from urllib.parse import SplitResult, urlsplit
+from urllib.parse import urlsplit
 
 from agent.siteplan.document import Place
 from agent.siteplan.plan import MqttVersion, Source, SourceKind
 from agent.siteplan.reader import Reader
 from agent.siteplan.schema import SourceBlock
 
-_SCHEMES: Final = {SourceKind.MQTT_JSON: ("mqtt", 1883), SourceKind.OPCUA: ("opc.tcp", 4840)}
+_SCHEMES: Final = {SourceKind.MQTT_JSON: "mqtt", SourceKind.OPCUA: "opc.tcp"}
 _EXAMPLES: Final = {
     SourceKind.MQTT_JSON: "an address such as mqtt://host:1883",
     SourceKind.OPCUA: "an address such as opc.tcp://host:4840/path",
@@ -48,18 +48,18 @@ def read_sources(
 
 def check_address(reader: Reader, place: Place, kind: SourceKind, address: str) -> bool:
     """Note what is wrong with the address of a source; true if nothing is."""
-    scheme, _ = _SCHEMES[kind]
+    if "@" in address:
+        hint = "secrets never stand in the site file"
+        shown = repr("…@" + address.rpartition("@")[2])
+        reader.fault(place, "an address without user and password", hint, value=shown)
+        return False
     try:
         url = urlsplit(address)
         port = url.port
     except ValueError:
         reader.fault(place, _EXAMPLES[kind], "a port is a number from 1 to 65535", value=repr(address))
         return False
-    if "@" in url.netloc:
-        hint = "secrets never stand in the site file"
-        reader.fault(place, "an address without user and password", hint, value=repr(_without_user(url)))
-        return False
-    if url.scheme != scheme or not url.hostname or port == 0:
+    if url.scheme != _SCHEMES[kind] or not url.hostname or port == 0:
         reader.fault(place, _EXAMPLES[kind], value=repr(address))
         return False
     if kind is SourceKind.MQTT_JSON and (url.path.strip("/") or url.query):
@@ -68,14 +68,10 @@ def check_address(reader: Reader, place: Place, kind: SourceKind, address: str) 
     return True
 
 
-def _without_user(url: SplitResult) -> str:
-    return f"{url.scheme}://…@{url.netloc.rpartition('@')[2]}{url.path}"
-
-
 def _opcua(reader: Reader, place: Place, name: str, block: SourceBlock) -> Source | None:
     foreign = [key for key in _MQTT_ONLY if getattr(block, key) is not None]
     for key in foreign:
-        reader.fault((*place, key), "no such key for kind opcua")
+        reader.fault((*place, key), "only keys of kind opcua: kind and address", value="")
     return None if foreign else Source(name=name, kind=block.kind, address=block.address)
 
 

@@ -16,7 +16,7 @@ class Declared:
     """What a unit says it has, read before its blocks are checked.
 
     So a cylinder with a wrong bore still counts as there, and a limit on it is no second fault. ``sure`` is
-    false where a number cannot be read: then nothing is said to be missing.
+    false where the numbers or ends are themselves in doubt: then nothing is said to be missing.
     """
 
     stages: tuple[int, ...]
@@ -46,20 +46,26 @@ def declared(stages: Any) -> Declared:
     stage_numbers: list[int | None] = []
     cylinder_numbers: list[int | None] = []
     ends: set[tuple[int, Side]] = set()
+    sure = True
     for stage in _mappings(stages):
         stage_numbers.append(_number(stage))
         for cylinder in _mappings(stage.get("cylinders")):
             number = _number(cylinder)
             cylinder_numbers.append(number)
             sides = cylinder.get("ends")
-            if number is not None and isinstance(sides, dict):
-                ends |= {(number, side) for side in Side if side.value in sides}
+            named = {side for side in Side if isinstance(sides, dict) and side.value in sides}
+            ends |= {(number, side) for side in named if number is not None}
+            sure &= bool(named)
     return Declared(
         stages=tuple(n for n in stage_numbers if n is not None),
         cylinders=tuple(n for n in cylinder_numbers if n is not None),
         ends=frozenset(ends),
-        sure=None not in stage_numbers and None not in cylinder_numbers,
+        sure=sure and stage_numbers == [*range(1, len(stage_numbers) + 1)] and _distinct(cylinder_numbers),
     )
+
+
+def _distinct(numbers: list[int | None]) -> bool:
+    return None not in numbers and len(set(numbers)) == len(numbers)
 
 
 def _mappings(value: Any) -> list[dict[str, Any]]:
