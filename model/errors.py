@@ -3,8 +3,11 @@
 ModelError
 ├── OutOfRange          a value lies outside the range a formula was made for
 ├── CompositionError    a gas that cannot be tabulated as entered
-└── GasBuildError       the property library refused a state of the domain
+├── GasBuildError       the property library refused a state of the domain
+└── NotEvaluatedError   a frame that cannot be evaluated, with the verdict
 """
+
+from model.verdicts import Verdict
 
 
 class ModelError(ValueError):
@@ -34,3 +37,11 @@ class GasBuildError(ModelError):
         self.temperature_k = temperature_k
         self.pressure_pa = pressure_pa
         self.cause = cause
+
+
+class NotEvaluatedError(ModelError):
+    """A frame that cannot be evaluated."""
+
+    def __init__(self, verdict: Verdict) -> None:
+        super().__init__(f"not evaluated: {verdict.name.lower().replace('_', ' ')}")
+        self.verdict = verdict
