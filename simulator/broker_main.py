@@ -6,9 +6,10 @@ It speaks MQTT 3.1.1 and forgets the sessions of anonymous clients; a plant want
 import argparse
 import asyncio
 import logging
-import signal
 import sys
 from collections.abc import Sequence
+
+from simulator.stopping import stop_on_signals
 
 MISSING = "the embedded broker is missing: install the extra with  pip install 'throwline[demo]'"
 
@@ -17,13 +18,7 @@ async def serve(port: int) -> None:
     """Serve until asked to end."""
     from amqtt.broker import Broker  # noqa: PLC0415 - an optional extra
 
-    stop = asyncio.Event()
-    loop = asyncio.get_running_loop()
-    for number in (signal.SIGINT, signal.SIGTERM):
-        try:
-            loop.add_signal_handler(number, stop.set)
-        except NotImplementedError:  # no such handlers on Windows
-            signal.signal(number, lambda *_: loop.call_soon_threadsafe(stop.set))
+    stop = stop_on_signals()
     config = {
         "listeners": {"default": {"type": "tcp", "bind": f"127.0.0.1:{port}"}},
         "plugins": {"amqtt.plugins.authentication.AnonymousAuthPlugin": {"allow_anonymous": True}},

@@ -2,12 +2,12 @@
 
 import argparse
 import asyncio
+import json
 import logging
 import math
-import signal
 import sys
 import time
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from contextlib import AsyncExitStack
 from dataclasses import dataclass, field
 from importlib.resources import files
@@ -17,10 +17,11 @@ from agent.siteplan.errors import SiteFileError
 from agent.siteplan.load import load_site
 from agent.siteplan.plan import SitePlan, SourceKind
 from simulator.plant import Plant, PlantMismatchError, Sample
-from simulator.scenario import ScenarioError, load_scenario
+from simulator.scenario import Scenario, ScenarioError, load_scenario
 from simulator.serve_mqtt import MqttWire
 from simulator.serve_opcua import OpcuaWire
 from simulator.steady_table import MACHINES
+from simulator.stopping import stop_on_signals
 
 PERIOD_S = 1.0
 # Samples are taken between the whole seconds at which the agent looks, so that delivery is no race.
@@ -63,9 +64,15 @@ class _Wires:
 
 
 async def serve(
-    plant: Plant, site: SitePlan, *, ledger: Path | None, duration_s: float, stop: asyncio.Event
+    plant: Plant,
+    site: SitePlan,
+    *,
+    stop: asyncio.Event,
+    began: Callable[[float], None],
+    ledger: Path | None = None,
+    duration_s: float = math.inf,
 ) -> None:
-    """Sample and serve until stopped or until the duration is over."""
+    """Sample and serve until stopped or until the duration is over; ``began`` hears when the story begins."""
     async with AsyncExitStack() as stack:
         wires = _Wires()
         await wires.open(site, ledger, stack)
@@ -77,7 +84,7 @@ async def serve(
                 return
             if story_start is None and wires.up:
                 story_start = due
-                _say("plant up")
+                began(due)
             await wires.put(plant.sample(due, story_start))
 
 
@@ -104,30 +111,45 @@ def run(
     seed: int = 1,
     ledger: Path | None = None,
     duration_s: float = math.inf,
+    timetable: bool = False,
 ) -> int:
-    """Run the plant until SIGINT or SIGTERM; 0 if it ended as asked, 1 if it could not start."""
+    """Run the plant until SIGINT or SIGTERM; 0 if it ended as asked, 1 if it could not start.
+
+    It says ``plant up`` once both wires are up; with ``timetable`` also a line of JSON: what happens when.
+    """
     logging.basicConfig(level=logging.WARNING, format="plant: %(message)s")
     logging.getLogger("asyncua").setLevel(logging.CRITICAL)  # a client that hangs up is no news here
     try:
         plan = load_site(site, addresses=dict(addresses or {}))
         story = load_scenario(scenario_path(scenario), MACHINES)
         plant = Plant(plan, story, MACHINES, pace=pace, seed=seed)
-        asyncio.run(_until_signalled(plant, plan, ledger=ledger, duration_s=duration_s))
+
+        def began(at: float) -> None:
+            _say("plant up")
+            if timetable:
+                _say(_timetable(story, at, pace))
+
+        asyncio.run(_until_signalled(plant, plan, began=began, ledger=ledger, duration_s=duration_s))
     except (SiteFileError, ScenarioError, PlantMismatchError, PlantError, ValueError) as error:
         print(f"plant: {error}", file=sys.stderr)  # noqa: T201
         return 1
     return 0
 
 
-async def _until_signalled(plant: Plant, plan: SitePlan, *, ledger: Path | None, duration_s: float) -> None:
-    stop = asyncio.Event()
-    loop = asyncio.get_running_loop()
-    for number in (signal.SIGINT, signal.SIGTERM):
-        try:
-            loop.add_signal_handler(number, stop.set)
-        except NotImplementedError:  # no such handlers on Windows
-            signal.signal(number, lambda *_: loop.call_soon_threadsafe(stop.set))
-    await serve(plant, plan, ledger=ledger, duration_s=duration_s, stop=stop)
+async def _until_signalled(
+    plant: Plant, plan: SitePlan, *, began: Callable[[float], None], ledger: Path | None, duration_s: float
+) -> None:
+    stop = stop_on_signals()
+    await serve(plant, plan, stop=stop, began=began, ledger=ledger, duration_s=duration_s)
+
+
+def _timetable(story: Scenario, start: float, pace: float) -> str:
+    return json.dumps(
+        {
+            "timetable": [(start + after, text) for after, text in story.real_timetable(pace)],
+            "repeats_after_s": None if story.repeat is None else story.repeat.real_s(pace),
+        }
+    )
 
 
 def _say(line: str) -> None:
@@ -152,6 +174,7 @@ def main(argv: Sequence[str] | None = None) -> int:
         "--ledger", type=Path, help="append each message that the broker confirmed, a JSON line each"
     )
     parser.add_argument("--duration", type=float, default=math.inf, help="end after so many seconds")
+    parser.add_argument("--timetable", action="store_true", help="say what happens when, as a line of JSON")
     words = parser.parse_args(argv)
     return run(
         words.site,
@@ -161,6 +184,7 @@ def main(argv: Sequence[str] | None = None) -> int:
         seed=words.seed,
         ledger=words.ledger,
         duration_s=words.duration,
+        timetable=words.timetable,
     )
 
 

@@ -114,6 +114,10 @@ class Scenario:
             return elapsed_s
         return elapsed_s % self.repeat.real_s(pace)
 
+    def real_timetable(self, pace: float) -> tuple[tuple[float, str], ...]:
+        """Real seconds after the beginning of a round [s], and what happens then."""
+        return tuple(sorted((h.real_s(pace), h.say) for h in self.timetable))
+
     def conditions(self, unit: str, rated: Conditions, elapsed_s: float, pace: float) -> Conditions:
         """What the story makes of a unit's rated conditions.
 
