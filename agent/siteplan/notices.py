@@ -1,7 +1,7 @@
 """What a reader of a site file should know although nothing is wrong with it."""
 
 import math
-from collections.abc import Iterable, Iterator, Mapping, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 
 from agent.siteplan.plan import Source, UnitPlan
 from agent.siteplan.subjects import spoken
@@ -14,7 +14,7 @@ _MISSED_SHARE = 0.3  # of an input's span outside the gas table before it is wor
 
 def unit_notices(plan: UnitPlan) -> Iterator[str]:
     """Everything about one unit that is allowed and costs something."""
-    for notice in (*_inputs_left_out(plan), *_steps(plan), *_limits(plan), *_table_ranges(plan)):
+    for notice in (*_inputs_left_out(plan), *_steps(plan), *_table_ranges(plan)):
         yield f"{plan.id}: {notice}"
 
 
@@ -59,18 +59,6 @@ def _steps(plan: UnitPlan) -> Iterator[str]:
         twin = seen.setdefault(frozenset(step.held_open), step.word)
         if twin != step.word:
             yield f"load steps {twin} and {step.word} hold the same ends open"
-
-
-def _limits(plan: UnitPlan) -> Iterator[str]:
-    missing = limits_not_entered(plan)
-    for key in dict.fromkeys(key for _, key in missing):
-        where = _joined(spoken(subject) for subject, k in missing if k == key)
-        yield f"no limit of {QUANTITIES[key].words} for {where}: no margin and no alarm of it there"
-
-
-def _joined(words: Iterable[str]) -> str:
-    parts = list(words)
-    return parts[0] if len(parts) == 1 else f"{', '.join(parts[:-1])} and {parts[-1]}"
 
 
 def _table_ranges(plan: UnitPlan) -> Iterator[str]:
