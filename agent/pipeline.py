@@ -13,7 +13,7 @@ reading.
 import logging
 import math
 from collections.abc import Collection, Iterable, Mapping, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from typing import Final
 
 from agent.alarms.limits import LimitAlarms
@@ -24,8 +24,10 @@ from agent.manipulation.frames import HISTORY_S, FrameBuilder
 from agent.manipulation.late import late_change
 from agent.records import (
     AlarmEvent,
+    AlarmState,
     Commit,
     DerivedRow,
+    EventKind,
     Frame,
     LinkState,
     Reading,
@@ -42,7 +44,6 @@ _log = logging.getLogger(__name__)
 
 SETTLE_S: Final = 0.5  # a tick is judged this long after it, so that readings of its second have arrived
 REPLAY_S: Final = 120  # rows a crash left unjudged are judged at start if they are no older than this
-WARM_S: Final = 900  # rows fed to the alarms at start, so that pending delays are as they were
 BACKLOG_TICKS: Final = 600  # kept in memory while the store refuses to write
 PRUNE_EVERY_S: Final = 60
 
@@ -126,20 +127,23 @@ class Pipeline:
         self._last_tick = max(newest, _due(now))
 
     def _restore(self, unit: str, line: _Line, now: float) -> None:
-        standings = states(self._journal_reader.latest(unit))
-        line.alarms.restore({alarm: standing for (_, alarm), standing in standings.items()})
+        line.alarms.reset(states(self._journal_reader.latest(unit)))
         judged = self._journal.last_tick(unit)
         if judged is None:
             return
         rows = self._reader.rows(
-            unit, judged - WARM_S, _due(now) + 1,
-            inputs=line.plan.input_names(), results=line.plan.result_names(),
-        )  # fmt: skip
-        line.alarms.warm([(frame, row) for frame, row in rows if row.tick <= judged])
+            unit,
+            judged - line.alarms.warm_window_s,
+            _due(now) + 1,
+            inputs=line.plan.input_names(),
+            results=line.plan.result_names(),
+        )
+        # Rows of a longer outage, made from a broker's queue, are history: they never alarm.
         oldest = _due(now) - REPLAY_S
-        left = [_Judged(frame=f, row=r) for f, r in rows if r.tick > judged and r.tick >= oldest]
-        if left:
-            self._judge(left, ())
+        kept = [(frame, row) for frame, row in rows if row.tick <= judged or row.tick >= oldest]
+        events = line.alarms.warm(kept, judged)
+        if kept and kept[-1][1].tick > judged:
+            self._append(events, {unit: kept[-1][1].tick})
 
     # -- readings ------------------------------------------------------------------------------------------
 
@@ -261,12 +265,15 @@ class Pipeline:
             asked = [r for r in requests if r.unit == unit] if item.row.tick == newest[unit] else []
             events += self._lines[unit].alarms.update(item.row, item.frame, asked)
             ticks[unit] = item.row.tick
-        events += _answers_for_strangers(requests, set(self._lines), newest)
+        events += _answers_for_strangers(requests, self._lines.keys(), newest)
+        return self._append(events, ticks)
+
+    def _append(self, events: Sequence[AlarmEvent], ticks: Mapping[str, int]) -> bool:
         try:
             self._journal.append(events, ticks)
         except StoreError as error:
             # The alarms have moved on: what they said is kept until the journal takes it.
-            self._unwritten = events
+            self._unwritten = list(events)
             self._tell_store(str(error))
             return False
         self._unwritten = []
@@ -326,9 +333,12 @@ def _answers_for_strangers(
     requests: Iterable[Request], known: Collection[str], newest: Mapping[str, int]
 ) -> list[AlarmEvent]:
     """A request for a unit this agent does not hold is refused, else it would wait for ever."""
-    from agent.alarms.limits import refusal  # noqa: PLC0415
-
-    tick = max(newest.values(), default=0)
     return [
-        replace(refusal(r, tick), text=f"No unit {r.unit} here.") for r in requests if r.unit not in known
-    ]
+        AlarmEvent(
+            unit=r.unit, alarm=r.alarm, tick=max(newest.values(), default=0), kind=EventKind.REFUSED,
+            state=AlarmState.NORMAL, text=f"Request refused: there is no unit {r.unit} here.",
+            actor=r.actor, reason=r.reason, request=r.id,
+        )
+        for r in requests
+        if r.unit not in known
+    ]  # fmt: skip

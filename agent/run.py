@@ -21,7 +21,8 @@ from agent.records import Reading, Receipt
 from agent.siteplan.plan import SitePlan
 from agent.storage.sqlite_series import SeriesReader, SeriesWriter
 from agent.unit_line import UnitLine
-from model.gas import GasSurface, load_or_build
+from model.gas import load_or_build
+from model.surface import GasSurface
 
 _log = logging.getLogger(__name__)
 

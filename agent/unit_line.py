@@ -10,8 +10,8 @@ from agent.manipulation.running import RunningState
 from agent.records import DerivedRow, Frame, Quality, RunState
 from agent.siteplan.plan import UnitPlan
 from model.evaluate import Corrections, InputAccuracy, Measured, evaluate_with_uncertainty
-from model.gas import GasSurface
 from model.quantities import series_name
+from model.surface import GasSurface
 
 _log = logging.getLogger(__name__)
 
@@ -37,10 +37,7 @@ class UnitLine:
         self._input_names = plan.input_names()
         self._result_names = plan.result_names()
         self._run_state_place = self._result_names.index(RUN_STATE)
-        # A transmitter's limit of error is read as a rectangular distribution (GUM 4.3.7).
-        self._accuracy = InputAccuracy(
-            {i.name: i.accuracy / np.sqrt(3.0) for i in plan.inputs if i.accuracy > 0.0}
-        )
+        self._accuracy = InputAccuracy.from_limits(self._input_names, [i.accuracy for i in plan.inputs])
         self._required = np.array([i.required for i in plan.inputs])
         self._failing = False
         self.reset()
