@@ -107,17 +107,17 @@ class Instrument:
 class HeaderSwing:
     """The slow breathing of a header: two sines of a few minutes, as a factor about one."""
 
-    _PARTS = ((0.003, 240.0), (0.0015, 97.0))  # share of the pressure, period in seconds
+    _PARTS = ((1.0, 240.0), (0.5, 97.0))  # share of the amplitude, period in seconds
 
-    def __init__(self, seed: str) -> None:
+    def __init__(self, amplitude: float, seed: str) -> None:
         chance = random.Random(seed)
+        self._amplitude = amplitude
         self._phases = [chance.uniform(0, 2 * math.pi) for _ in self._PARTS]
 
     def factor(self, plant_time_s: float) -> float:
-        waves = zip(self._PARTS, self._phases, strict=True)
-        return 1 + sum(
-            a * math.sin(2 * math.pi * plant_time_s / period + phase) for (a, period), phase in waves
-        )
+        turns = zip(self._PARTS, self._phases, strict=True)
+        wave = sum(a * math.sin(2 * math.pi * plant_time_s / period + phase) for (a, period), phase in turns)
+        return 1 + self._amplitude * wave
 
 
 def rounded(value: float, unit: str) -> float:

@@ -2,11 +2,15 @@
 
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
+from types import MappingProxyType
+from typing import Final
 
 from agent.siteplan.plan import Input, SitePlan
 from simulator.instruments import HeaderSwing, Instrument, rounded
 from simulator.scenario import Scenario
 from simulator.steady_table import Conditions, Machine
+
+_SWING: Final = MappingProxyType({"suction": 0.003, "discharge": 0.0015})  # share of the pressure
 
 
 class PlantMismatchError(ValueError):
@@ -97,7 +101,7 @@ class Plant:
         return rounded(reading, tag.unit)
 
     def _swing(self, unit: str, header: str) -> HeaderSwing:
-        return HeaderSwing(f"{self._seed}/{unit}/{header}")
+        return HeaderSwing(_SWING[header], f"{self._seed}/{unit}/{header}")
 
 
 def _check(site: SitePlan, machines: Mapping[str, Machine]) -> None:
