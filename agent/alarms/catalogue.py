@@ -116,8 +116,8 @@ _TABLE: Final = (
         priority=Priority.MEDIUM,
         owner=_OPERATOR,
         action="Lower the pressure ratio of this stage: check the cooling water, raise the suction pressure "
-        "or lower the discharge pressure. If it is not stage 1: do not open the first-stage recycle and do not "
-        "unload the stages before it, because the last stage then gets hotter.",
+        "or lower the discharge pressure. If it is not stage 1: do not open the first-stage recycle and do "
+        "not unload the stages before it, because the last stage then gets hotter.",
         consequence="The unit may trip on discharge temperature, and its flow is lost.",
         time_to_respond="within the hour",
         rationale="Ten kelvin leave time to act before the trip. Medium: the control board's own alarm comes "

@@ -92,11 +92,11 @@ def _numbers(alarm: AlarmType, found: Sight) -> str:
     estimate = f"{subject}: {kind}{shown(quantity, found.value)} by estimate, {_band(quantity, found.band)}."
     if alarm.rule is Rule.ABOVE_SHARE:
         edge = f"{shown(quantity, alarm.setting * limit.value)}, which is {100 * alarm.setting:g} %"
-        return f"{estimate} Alarm point {edge} of {_limit('limit', quantity, limit)}."
-    share = "" if alarm.setting == 1 else f"Alarm point {100 * alarm.setting:g} % of the minimum. "
-    return (
-        f"{estimate} {share}Counted at the lower end of that, against {_limit('minimum', quantity, limit)}."
-    )
+        counts = f"The upper end of that counts: the alarm point is {edge} of"
+        return f"{estimate} {counts} {_limit('limit', quantity, limit)}."
+    share = "" if alarm.setting == 1 else f"{100 * alarm.setting:g} % of "
+    counts = f"The lower end of that counts: the alarm point is {share}"
+    return f"{estimate} {counts}{_limit('minimum', quantity, limit)}."
 
 
 def _band(quantity: str, band: float) -> str:
