@@ -46,13 +46,13 @@ def dew_line(critical: Array, fractions: Array, low_temperature_k: float, pressu
     M. L. Michelsen, *Fluid Phase Equilibria* 9 (1982) 1. D.-Y. Peng, D. B. Robinson, *Ind. Eng. Chem.
     Fundam.* 15 (1976) 59.
     """
-    span = np.linspace(low_temperature_k, max(low_temperature_k, float(critical[0].max())), 60)
+    span = np.linspace(low_temperature_k, max(low_temperature_k, float(critical[0].max())), 40)
     t, p = np.meshgrid(span, pressure_pa, indexing="ij")
     unstable = _unstable(critical, fractions, t.ravel(), p.ravel()).reshape(t.shape)
     wet = unstable.any(axis=0)
     top = span.size - 1 - np.argmax(unstable[::-1], axis=0)
     low, high = span[top], span[np.minimum(top + 1, span.size - 1)]
-    for _ in range(8):  # a sixtieth of the span, halved eight times: a few hundredths of a kelvin
+    for _ in range(8):  # a fortieth of the span, halved eight times: a few hundredths of a kelvin
         middle = (low + high) / 2
         below = _unstable(critical, fractions, middle, pressure_pa)
         low, high = np.where(below, middle, low), np.where(below, high, middle)

@@ -30,7 +30,7 @@ Array = NDArray[np.float64]
 FORMAT_VERSION: Final = 1  # of the cache file; raised whenever the meaning of its arrays changes
 SUM_TOLERANCE: Final = 1e-6
 _IDEAL_PRESSURE: Final = 100.0  # Pa: where the gas counts as perfect
-_DEW_POINTS: Final = 49
+_DEW_POINTS: Final = 33
 
 COMPONENTS: Final[Mapping[str, str]] = MappingProxyType(
     {
