@@ -57,10 +57,9 @@ class AlarmType:
         return "temperature_difference" if self.rule is Rule.LITTLE_LEFT else "fraction"
 
     @property
-    def deadband_dimension(self) -> str:
-        """Dimension of a site's own deadband; that of the reversal alarm is of its duration."""
-        dimensions = {Rule.ABOVE_SHARE: "fraction", Rule.LITTLE_LEFT: "temperature_difference"}
-        return dimensions.get(self.rule, "angle")
+    def deadband_dimension(self) -> str | None:
+        """Dimension of a site's own deadband; None where two quantities are watched and none fits both."""
+        return self.setting_dimension if len(self.watched) == 1 else None
 
 
 _ON_DELAY_S = 60.0  # a short excursion needs no action

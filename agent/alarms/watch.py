@@ -56,10 +56,7 @@ class Sight:
 
 
 def configured(plan: UnitPlan, catalogue: Mapping[str, AlarmType] = CATALOGUE) -> dict[str, AlarmType]:
-    """The catalogue with the site's own settings of this unit.
-
-    A site's deadband of the reversal alarm is that of the duration; the magnitude keeps the catalogue's.
-    """
+    """The catalogue with the site's own settings of this unit."""
     found = dict(catalogue)
     for site in plan.alarm_settings:
         if site.alarm not in found:
@@ -70,8 +67,9 @@ def configured(plan: UnitPlan, catalogue: Mapping[str, AlarmType] = CATALOGUE) -
         if site.on_delay_s is not None:
             alarm = replace(alarm, on_delay_s=site.on_delay_s)
         if site.deadband is not None:
-            first = replace(alarm.watched[0], deadband=site.deadband)
-            alarm = replace(alarm, watched=(first, *alarm.watched[1:]))
+            if alarm.deadband_dimension is None:
+                raise ValueError(f"{plan.id}: one deadband does not fit what {site.alarm} watches")
+            alarm = replace(alarm, watched=(replace(alarm.watched[0], deadband=site.deadband),))
         found[site.alarm] = alarm
     return found
 

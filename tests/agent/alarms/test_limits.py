@@ -88,9 +88,9 @@ def test_temperature_and_reversal_in_words(engine: LimitAlarms, machine: Any) ->
     assert (event.alarm, event.subject) == ("reversal", "cylinder2")
     assert event.text.startswith(
         "K-1. Load reversal below its minimum. Cylinder 2: duration 36° by estimate, plus or minus 2° (two "
-        "standard uncertainties). The lower end of that counts: the alarm point is the minimum of 40° (sheet "
-        "7 (invented), entered by R. Fenn). Also past it: cylinder 1. What to do: Return to the last permitted "
-        "load step."
+        "standard uncertainties). The lower end of that counts: the alarm point is the minimum of 40° "
+        "(sheet 7 (invented), entered by R. Fenn). Also past it: cylinder 1. What to do: Return to the last "
+        "permitted load step."
     )
 
 

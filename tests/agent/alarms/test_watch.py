@@ -147,14 +147,15 @@ def test_a_limit_without_a_transmitter_is_listed(machine: Any) -> None:
 def test_a_sites_own_settings(machine: Any) -> None:
     own = machine.with_settings(
         AlarmSetting(alarm=GAS, setting=0.9, deadband=0.05),
-        AlarmSetting(alarm=REVERSAL, on_delay_s=20.0, deadband=math.radians(10)),
+        AlarmSetting(alarm=REVERSAL, on_delay_s=20.0),
     )
     assert seen(own, GAS, {C1_GAS: 153.5e3, C1_U: 0.0}).condition is T  # hand: 0.9 x 170 = 153
     assert seen(own, GAS, {C1_GAS: 145e3, C1_U: 0.0}).condition is H  # hand: down to 144.5
     reversal = configured(own.plan)[REVERSAL]
     assert reversal.on_delay_s == 20
-    assert reversal.watched[0].deadband == pytest.approx(0.1745, abs=1e-4)  # hand: 10 deg
-    assert reversal.watched[1] == CATALOGUE[REVERSAL].watched[1]
+    assert reversal.watched == CATALOGUE[REVERSAL].watched
+    with pytest.raises(ValueError, match="one deadband does not fit what reversal watches"):
+        configured(machine.with_settings(AlarmSetting(alarm=REVERSAL, deadband=0.1)).plan)
     with pytest.raises(ValueError, match="no alarm rod_drop"):
         configured(machine.with_settings(AlarmSetting(alarm="rod_drop")).plan)
 
