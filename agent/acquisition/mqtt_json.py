@@ -51,6 +51,7 @@ class _Link:
     number: int
     client: Client
     waiting: set[int] = field(default_factory=set)
+    answered: bool = False
     cause: str = ""
     closing: bool = False
 
@@ -168,6 +169,7 @@ class MqttJsonSource(ReconnectingSource):
         def on_connect(
             _c: Client, _u: Any, _f: ConnectFlags, code: ReasonCode, _p: Properties | None
         ) -> None:
+            link.answered = True
             if code.is_failure:
                 link.end(f"the broker refused the connection: {code}")
             else:
@@ -186,22 +188,15 @@ class MqttJsonSource(ReconnectingSource):
         def on_disconnect(
             _c: Client, _u: Any, flags: DisconnectFlags, code: ReasonCode, _p: Properties | None
         ) -> None:
-            who = (
-                "the broker ended the connection"
-                if flags.is_disconnect_packet_from_server
-                else "connection lost"
-            )
-            link.end(f"{who}: {code}")
+            if not link.answered:
+                link.end(f"the broker does not answer to MQTT {self._source.mqtt_version.value}")
+            elif flags.is_disconnect_packet_from_server:
+                link.end(f"the broker ended the connection: {code}")
+            else:
+                link.end(f"connection lost: {code}")
 
         def on_message(_c: Client, _u: Any, message: MQTTMessage) -> None:
-            received_time = self._clock.now()
-            try:
-                entry = self._inputs.get(message.topic)
-            except UnicodeDecodeError:
-                entry = None
-            outcome = None
-            if entry is not None:
-                outcome = decode(bytes(message.payload), entry, self._source, received_time)
+            entry, outcome = self._read(message)
             post(self._take, link, message.mid if message.qos else None, entry, outcome)
 
         client.on_connect = on_connect
@@ -211,13 +206,24 @@ class MqttJsonSource(ReconnectingSource):
         # With this set, ack() leaves the writing to the thread instead of writing beside it.
         client.on_socket_register_write = _leave_to_the_thread
 
+    def _read(self, message: MQTTMessage) -> tuple[Input | None, Reading | Rejection | None]:
+        """In the thread: whose message it is and what is in it; nothing for a topic of no input."""
+        received_time = self._clock.now()
+        try:
+            entry = self._inputs.get(message.topic)
+        except UnicodeDecodeError:
+            entry = None
+        if entry is None:
+            return None, None
+        return entry, decode(bytes(message.payload), entry, self._source, received_time)
+
     def _take(
         self, link: _Link, message: int | None, entry: Input | None, outcome: Reading | Rejection | None
     ) -> None:
         """In the event loop: pass one message on, or acknowledge it at once."""
         if message is not None:
             link.waiting.add(message)
-        if entry is None or outcome is None:  # a topic under the filter that no input is entered for
+        if entry is None or outcome is None:
             self._settle_now(link, message)
         elif isinstance(outcome, Rejection):
             self._settle_now(link, message)

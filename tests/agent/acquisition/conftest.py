@@ -2,6 +2,7 @@
 
 import asyncio
 import contextlib
+import getpass
 import json
 import math
 import os
@@ -331,9 +332,10 @@ def mosquitto(free_port: int, tmp_path: Path) -> Iterator[Callable[[MqttVersion]
     assert program is not None
     settings = tmp_path / "mosquitto.conf"
     settings.write_text(
+        f"user {getpass.getuser()}\n"  # else a root's broker may not write where it is told to
         f"listener {free_port} 127.0.0.1\nallow_anonymous true\n"
         f"persistence true\npersistence_location {tmp_path}/\n"
-        "autosave_interval 1\nautosave_on_changes true\nlog_dest none\n"
+        "autosave_interval 1\nlog_dest none\n"
     )
     started: list[MqttPlant] = []
 
