@@ -133,7 +133,7 @@ def _mm(length_m: float) -> str:
 def _cylinders(plan: UnitPlan) -> Table:
     table = _table(
         ">stage", ">cylinder", ">bore", ">rod", "end", ">swept\ndm3", ">clearance\n%",
-        ">suction valves\n% of piston", ">discharge valves\n% of piston",
+        ">suction\narea %", ">discharge\narea %",
     )  # fmt: skip
     for stage in plan.unit.stages:
         for cylinder in stage.cylinders:

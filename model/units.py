@@ -34,7 +34,7 @@ class UnitError(ValueError):
 
 _SPELLINGS: Final = MappingProxyType({"°C": "degC", "°F": "degF", "°": "deg", "percent": "%"})
 _REFERENCE: Final = re.compile(r"(?P<base>.+?)\s*\(?(?P<reference>abs|absolute|gauge|gage|a|g)\)?")
-_NUMBER: Final = re.compile(r"[+-]?(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d+)?")
+_NUMBER: Final = re.compile(r"[+-]?(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d+)?", re.ASCII)
 _SEPARATED: Final = re.compile(r"[+-]?\d+(?:\.\d+)*(?:[,'_’]\d+| \d{3}\b)+(?:[.,]\d+)*")
 _PINT_WORD: Final = re.compile(r"[A-Za-z_]+[0-9]?(?:[*/][A-Za-z_]+[0-9]?){0,3}")
 

@@ -89,8 +89,7 @@ def _document(file: str, text: str) -> Document:
         node = YAML(typ="rt").compose(io.StringIO(text))
     except MarkedYAMLError as error:
         mark = error.problem_mark or error.context_mark
-        hint = "indent with spaces, not tabs" if "\\t" in str(error.problem) else str(error.problem or "")
-        raise _whole(file, "valid YAML", hint, mark.line + 1 if mark else 0) from None
+        raise _whole(file, "valid YAML", _yaml_hint(error), mark.line + 1 if mark else 0) from None
     except YAMLError as error:
         raise _whole(file, "valid YAML", str(error).splitlines()[0]) from None
     except RecursionError:
@@ -102,6 +101,15 @@ def _document(file: str, text: str) -> Document:
     builder = _Builder(file)
     values = builder.value(node, ())
     return Document(file=file, text=text, values=values, marks=builder.marks, faults=tuple(builder.faults))
+
+
+def _yaml_hint(error: MarkedYAMLError) -> str:
+    problem = str(error.problem or "")
+    if "\\t" in problem:
+        return "indent with spaces, not tabs"
+    if not error.context_mark:
+        return problem
+    return f"{problem}, {error.context} that starts on line {error.context_mark.line + 1}"
 
 
 class _Builder:

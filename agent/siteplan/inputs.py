@@ -109,9 +109,9 @@ def _note_name(reader: Reader, place: Place, has: Declared, taken: Taken) -> str
 def _check_source(
     reader: Reader, place: Place, block: InputBlock, sources: Mapping[str, Source], taken: Taken
 ) -> None:
-    declared = reader.at(("sources",))
-    if block.source not in (declared or {}):
-        reader.fault((*place, "source"), "a source of this file", closest(block.source, declared or {}))
+    names = reader.keys(("sources",))
+    if block.source not in names:
+        reader.fault((*place, "source"), "a source of this file", closest(block.source, names))
         return
     first = taken.addresses.setdefault((block.source, block.address), place)
     if first != place:
@@ -206,7 +206,7 @@ def _accuracy(
     width = span[1] - span[0]
     limit_of_error = value * width if of_span else value
     if not 0 < limit_of_error <= _MOST_INACCURATE * width:
-        reader.fault(here, f"a limit of error above 0 and up to {_MOST_INACCURATE:.0%} of span")
+        reader.fault(here, f"a limit of error above 0 and up to {100 * _MOST_INACCURATE:.0f} % of span")
         return None
     return limit_of_error
 

@@ -90,7 +90,7 @@ def _plan(reader: Reader, addresses: Mapping[str, str]) -> SitePlan | None:
 
 def _site(reader: Reader) -> SiteBlock | None:
     place: Place = ("site",)
-    site = reader.block(SiteBlock, place) if reader.at(place) is not None else None
+    site = reader.block(SiteBlock, place) if "site" in reader.keys(()) else None
     # Without a barometer the rest is still checked; the missing one is a fault by itself.
     reader.barometer_pa = site.barometer if site is not None else _SEA_LEVEL_PA
     return site
@@ -148,12 +148,10 @@ def _unit(
     """The plan of one unit. Its blocks are checked also where the unit lacks a key of its own."""
     before = len(reader.faults)
 
-    def present(key: str) -> bool:
-        return reader.at((*place, key)) is not None
-
+    keys = reader.keys(place)
     has = declared(reader.at((*place, "stages")))
-    frame = read_frame(reader, (*place, "frame")) if present("frame") or block else None
-    gas = read_gas(reader, (*place, "gas")) if present("gas") or block else None
+    frame = read_frame(reader, (*place, "frame")) if "frame" in keys else None
+    gas = read_gas(reader, (*place, "gas")) if "gas" in keys else None
     stages = read_stages(reader, (*place, "stages"))
     steps = read_load_steps(reader, (*place, "load_steps"), has)
     limits = read_limits(reader, (*place, "limits"), has)

@@ -2,6 +2,7 @@
 
 import math
 from collections.abc import Mapping, Sequence
+from dataclasses import replace
 
 from agent.siteplan.document import Place
 from agent.siteplan.reader import Reader, closest
@@ -15,7 +16,7 @@ from agent.siteplan.schema import (
     LoadStepBlock,
     StageBlock,
 )
-from agent.siteplan.subjects import Declared, end, forms, spoken
+from agent.siteplan.subjects import Declared, end, spoken
 from model.machine import Cylinder, End, GasDomain, Limit, LoadStep, Side, Stage
 from model.quantities import LOWER_LIMITS, QUANTITIES, UPPER_LIMITS, Quantity
 
@@ -90,36 +91,31 @@ def _read_cylinder(reader: Reader, place: Place, seen: dict[int, Place]) -> Cyli
     block = reader.block(CylinderBlock, place)
     if block is None:
         return None
-    if block.number in seen:
-        line = reader.document.line(seen[block.number])
+    before = len(reader.faults)
+    first = seen.setdefault(block.number, (*place, "number"))
+    if first != (*place, "number"):
+        line = reader.document.line(first)
         reader.fault((*place, "number"), "each cylinder number once in a unit", f"line {line} has it already")
-        return None
-    seen[block.number] = (*place, "number")
     tail = block.tail_rod or 0.0
     for key, rod in (("rod", block.rod), ("tail_rod", tail)):
         if rod >= block.bore:
             reader.fault((*place, key), f"a rod smaller than the bore of {1000 * block.bore:g} mm")
-            return None
-    bare = Cylinder(
-        number=block.number, bore_m=block.bore, rod_diameter_m=block.rod, tail_rod_diameter_m=tail,
-        reciprocating_mass_kg=block.reciprocating_mass, ends=(),
-        valve_natural_frequency_hz=block.valve_natural_frequency,
-    )  # fmt: skip
     if reader.at((*place, "ends")) == {}:
         reader.fault((*place, "ends"), "an end: head, crank or both", value="")
-    read = [
-        _read_end(reader, (*place, "ends", side.value), bare, side)
-        for side in Side
-        if side.value in block.ends
+    bare = Cylinder(
+        number=block.number,
+        bore_m=block.bore,
+        rod_diameter_m=block.rod,
+        tail_rod_diameter_m=tail,
+        reciprocating_mass_kg=block.reciprocating_mass,
+        ends=(),
+        valve_natural_frequency_hz=block.valve_natural_frequency,
+    )
+    ends = [
+        _read_end(reader, (*place, "ends", side.value), bare, side) for side in Side if side in block.ends
     ]
-    ends = tuple(e for e in read if e is not None)
-    if len(ends) < len(read):
-        return None
-    return Cylinder(
-        number=bare.number, bore_m=bare.bore_m, rod_diameter_m=bare.rod_diameter_m, tail_rod_diameter_m=tail,
-        reciprocating_mass_kg=bare.reciprocating_mass_kg, ends=ends,
-        valve_natural_frequency_hz=bare.valve_natural_frequency_hz,
-    )  # fmt: skip
+    sound = tuple(end for end in ends if end is not None)
+    return replace(bare, ends=sound) if len(reader.faults) == before else None
 
 
 def _read_end(reader: Reader, place: Place, cylinder: Cylinder, side: Side) -> End | None:
@@ -127,6 +123,8 @@ def _read_end(reader: Reader, place: Place, cylinder: Cylinder, side: Side) -> E
     if block is None:
         return None
     piston = cylinder.area_m2(side)
+    if piston <= 0:
+        return None  # the rod was told of already
     fits = True
     for key in ("suction_valve_area", "discharge_valve_area"):
         if getattr(block, key) >= piston:
@@ -197,7 +195,7 @@ def read_limits(reader: Reader, place: Place, has: Declared) -> tuple[Limit, ...
         value = _limit_value(reader, (*here, "value"), block.value, quantity)
         named = has.named(block.of, quantity.scope)
         if not named and has.sure:
-            reader.fault((*here, "of"), forms(quantity.scope))
+            reader.fault((*here, "of"), has.choice(quantity.scope))
         for subject in named:
             first = seen.setdefault((subject, quantity.key), here)
             if first is not here:

@@ -71,7 +71,7 @@ def _table_ranges(plan: UnitPlan) -> Iterator[str]:
         inside = min(bounds[1], entry.span_high) - max(bounds[0], entry.span_low)
         missed = 1 - max(inside, 0.0) / (entry.span_high - entry.span_low)
         if missed > _MISSED_SHARE:
-            yield f"the gas ranges leave out {missed:.0%} of the span of {entry.tag} ({entry.name})"
+            yield f"the gas ranges leave out {100 * missed:.0f} % of the span of {entry.tag} ({entry.name})"
     for limit in plan.unit.limits:
         if limit.quantity == "discharge_temperature" and limit.value > domain.high_temperature_k:
             shown = units.format_with_unit(limit.value, "degC", "temperature", 0)

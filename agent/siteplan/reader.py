@@ -64,6 +64,11 @@ class Reader:
         value = self.at(place)
         return len(value) if isinstance(value, list) else 0
 
+    def keys(self, place: Place) -> tuple[str, ...]:
+        """The keys that stand at a place; none if it holds no keys."""
+        value = self.at(place)
+        return tuple(value) if isinstance(value, dict) else ()
+
     def fault(self, place: Place, expected: str, hint: str = "", value: str | None = None) -> None:
         """Note that the value at a place is not what was expected; ``value`` replaces what is shown of it."""
         shown = _written(self.at(place)) if value is None else value

@@ -74,6 +74,12 @@ def _pattern(pattern: str, expected: str) -> BeforeValidator:
     return BeforeValidator(check)
 
 
+def _whole(value: Any) -> int:
+    if not isinstance(value, str) or not re.fullmatch("[0-9]{1,9}", value):
+        raise ValueRefusedError("a whole number")
+    return int(value)
+
+
 def _clearance(value: Any, info: ValidationInfo) -> float:
     return _fraction(value, info, "a clearance above 0 % and up to 300 % of the swept volume", 1e-9, 3.0)
 
@@ -103,7 +109,8 @@ Identity = Annotated[
     str, _pattern(r"[A-Za-z0-9][A-Za-z0-9_-]{0,39}", "letters, digits, - and _, at most 40, e.g. K-110")
 ]
 FieldName = Annotated[str, _pattern(r"\S+", "the name of a field, e.g. value")]
-Count = Annotated[int, Field(ge=1, le=99)]
+Whole = Annotated[int, BeforeValidator(_whole)]
+Count = Annotated[Whole, Field(ge=1, le=99)]
 Bore = Annotated[float, _si("length", "20 mm", "2 m")]
 Rod = Annotated[float, _si("length", "5 mm", "1 m")]
 Stroke = Annotated[float, _si("length", "20 mm", "1 m")]
@@ -132,7 +139,7 @@ class Block(BaseModel):
 
 
 class FileBlock(Block):
-    schema_: Annotated[int, Field(alias="schema", ge=1)]
+    schema_: Annotated[Whole, Field(alias="schema", ge=1)]
     site: Any
     sources: dict[str, Any]
     units: Annotated[list[Any], Field(min_length=1)]

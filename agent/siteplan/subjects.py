@@ -40,6 +40,12 @@ class Declared:
         name = f"{match[1]}{int(match[2])}" if match else words
         return (name,) if name in known and (match or scope is Scope.UNIT) else ()
 
+    def choice(self, scope: Scope) -> str:
+        """What a text may name in this scope, for a message."""
+        if scope is Scope.UNIT:
+            return "'unit'"
+        return f"one of: {', '.join(spoken(s) for s in self.subjects(scope))}, every {scope.value}"
+
 
 def declared(stages: Any) -> Declared:
     """What the raw list of stages declares."""
@@ -75,13 +81,6 @@ def _mappings(value: Any) -> list[dict[str, Any]]:
 def _number(block: dict[str, Any]) -> int | None:
     text = block.get("number")
     return int(text) if isinstance(text, str) and re.fullmatch(r"[0-9]{1,2}", text) else None
-
-
-def forms(scope: Scope) -> str:
-    """How to write a subject of this scope, for a message."""
-    if scope is Scope.UNIT:
-        return "'unit'"
-    return f"'{scope.value} 1' or 'every {scope.value}', as this unit has"
 
 
 def end(text: str) -> tuple[int, Side] | None:
