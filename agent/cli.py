@@ -90,6 +90,21 @@ def dashboard(
 
 
 @app.command()
+def plant(
+    site: SiteFile,
+    address: Addresses = None,
+    scenario: Annotated[str, typer.Option(help="Name of a scenario, or a scenario file.")] = "first-light",
+    pace: Annotated[float, typer.Option(help="Hurry the story by this factor.", min=0.1, max=60)] = 1.0,
+    seed: Annotated[int, typer.Option(help="Seed of the instruments' noise.")] = 1,
+) -> None:
+    """Serve an invented plant's tags on the wires that the site file names."""
+    pairs = _pairs(address)
+    from simulator.plant_main import run  # noqa: PLC0415
+
+    raise typer.Exit(run(site, scenario=scenario, addresses=pairs, pace=pace, seed=seed, timetable=True))
+
+
+@app.command()
 def demo(
     pace: Annotated[float, typer.Option(help="Hurry the story by this factor.", min=0.1, max=60)] = 1.0,
     port: Annotated[int, typer.Option(help="Port of the pages; a free one is taken if it is in use.")] = 8050,
