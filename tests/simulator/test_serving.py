@@ -1,0 +1,313 @@
+"""What stands on the wires is what the plant says, with its time, and nobody can write to it."""
+
+import asyncio
+import json
+import queue
+import socket
+import subprocess
+import sys
+import time
+from collections.abc import Callable, Coroutine, Iterator
+from contextlib import AsyncExitStack
+from datetime import UTC, datetime
+from pathlib import Path
+from typing import Any, TypeVar
+
+import numpy as np
+import pytest
+from asyncua import Client, Node, ua
+from asyncua.ua.uaerrors import BadUserAccessDenied
+from paho.mqtt.client import Client as MqttClient
+from paho.mqtt.client import MQTTMessage
+from paho.mqtt.enums import CallbackAPIVersion
+
+from agent.siteplan.load import load_site
+from agent.siteplan.plan import SitePlan
+from simulator.plant import Plant, Sample
+from simulator.plant_main import scenario_path
+from simulator.scenario import load_scenario
+from simulator.serve_mqtt import MqttWire, payload
+from simulator.serve_opcua import NAMESPACE, OpcuaWire
+from simulator.steady_table import MACHINES
+
+SITE = scenario_path("quiet").parents[1] / "sites" / "ostmere.yaml"
+NOW = 1_800_000_000.4
+Result = TypeVar("Result")
+
+
+def free_port() -> int:
+    with socket.socket() as probe:
+        probe.bind(("127.0.0.1", 0))
+        return int(probe.getsockname()[1])
+
+
+def until(ready: Callable[[], Any], seconds: float = 15.0) -> Any:
+    end = time.monotonic() + seconds
+    while time.monotonic() < end:
+        if found := ready():
+            return found
+        time.sleep(0.02)
+    raise AssertionError("not in time")
+
+
+class Broker:
+    def __init__(self) -> None:
+        self.port = free_port()
+        self.start()
+
+    def start(self) -> None:
+        self.process = subprocess.Popen(
+            [sys.executable, "-P", "-m", "simulator.broker_main", "--port", str(self.port)],
+            stdout=subprocess.PIPE,
+            cwd=SITE.parents[2],
+        )
+        assert self.process.stdout is not None
+        assert self.process.stdout.readline() == b"broker up\n"
+
+    def stop(self) -> int:
+        self.process.terminate()
+        code = self.process.wait(10)
+        assert self.process.stdout is not None
+        self.process.stdout.close()
+        return code
+
+
+@pytest.fixture
+def broker() -> Iterator[Broker]:
+    made = Broker()
+    yield made
+    made.stop()
+
+
+class Subscriber:
+    def __init__(self, port: int) -> None:
+        self.messages: queue.SimpleQueue[MQTTMessage] = queue.SimpleQueue()
+        subscribed: queue.SimpleQueue[bool] = queue.SimpleQueue()
+        self.client = MqttClient(CallbackAPIVersion.VERSION2, client_id="test-reader")
+        self.client.on_message = lambda _c, _u, message: self.messages.put(message)
+        self.client.on_subscribe = lambda *_: subscribed.put(True)
+        self.client.connect("127.0.0.1", port)
+        self.client.loop_start()
+        self.client.subscribe("ostmere/#", qos=1)
+        subscribed.get(timeout=10)
+
+    def take(self, count: int) -> list[MQTTMessage]:
+        return [self.messages.get(timeout=10) for _ in range(count)]
+
+    def close(self) -> None:
+        self.client.disconnect()
+        self.client.loop_stop()
+
+
+def site(mqtt: int = 1, opcua: int = 1) -> SitePlan:
+    return load_site(
+        SITE,
+        addresses={
+            "field-bus": f"mqtt://127.0.0.1:{mqtt}",
+            "control-system": f"opc.tcp://127.0.0.1:{opcua}/ostmere",
+        },
+    )
+
+
+def samples(plan: SitePlan, source: str, at: float = NOW) -> list[Sample]:
+    plant = Plant(plan, load_scenario(scenario_path("quiet"), MACHINES), MACHINES, pace=1.0, seed=1)
+    return [s for s in plant.sample(at, None) if s.tag.source == source]
+
+
+def test_every_message_on_the_field_bus_is_the_plants_sample(broker: Broker) -> None:
+    plan = site(mqtt=broker.port)
+    sent = samples(plan, "field-bus")
+    reader = Subscriber(broker.port)
+    wire = MqttWire(plan.sources["field-bus"].address, tags=len(sent))
+    wire.open()
+    try:
+        until(lambda: wire.up)
+        wire.publish(sent)
+        messages = reader.take(len(sent))
+    finally:
+        wire.close()
+        reader.close()
+    found = {m.topic: json.loads(m.payload) for m in messages}
+    assert {m.qos for m in messages} == {1}
+    assert not any(m.retain for m in messages)
+    assert set(found) == {i.address for i in plan.unit("K-110").inputs}
+    for sample in sent:
+        message = found[sample.tag.address]
+        assert message["value"] == sample.value
+        assert type(message["value"]) is type(sample.value)
+        assert datetime.fromisoformat(message["time"]).timestamp() == NOW
+        assert (message["quality"], message["simulated"]) == ("good", True)
+
+
+def test_ledger_holds_what_the_broker_confirmed_and_nothing_else(broker: Broker, tmp_path: Path) -> None:
+    plan = site(mqtt=broker.port)
+    ledger = tmp_path / "ledger"
+    wire = MqttWire(plan.sources["field-bus"].address, tags=9, ledger=ledger)
+    wire.open()
+    try:
+        until(lambda: wire.up)
+        first = samples(plan, "field-bus")
+        wire.publish(first)
+        until(lambda: wire.note_confirmed() or len(ledger.read_text().splitlines()) == len(first))
+        broker.stop()
+        until(lambda: not wire.up)
+        second = samples(plan, "field-bus", NOW + 1)
+        wire.publish(second)
+        wire.note_confirmed()
+        assert len(ledger.read_text().splitlines()) == len(first)  # nobody confirmed the second lot
+        broker.start()
+        # it connects again by itself and then sends what it kept
+        until(lambda: wire.note_confirmed() or len(ledger.read_text().splitlines()) == len(first + second))
+    finally:
+        wire.close()
+    rows = [json.loads(line) for line in ledger.read_text().splitlines()]
+    assert [(r["topic"], r["time"], r["value"]) for r in rows] == [
+        (s.tag.address, s.time, s.value) for s in first + second
+    ]
+
+
+def test_field_bus_without_a_broker_refuses_what_it_cannot_keep() -> None:
+    plan = site(mqtt=free_port())
+    wire = MqttWire(plan.sources["field-bus"].address, tags=9)
+    wire.open()
+    lot = samples(plan, "field-bus")
+    for _ in range(605):
+        wire.publish(lot)
+    begun = time.monotonic()
+    wire.close()
+    assert time.monotonic() - begun < 0.5
+    assert wire.refused == 5 * 9  # hand: 600 s are kept
+
+
+def test_payload_keeps_milliseconds_and_says_utc() -> None:
+    sample = samples(site(), "field-bus")[0]
+    assert json.loads(payload(sample))["time"] == "2027-01-15T08:00:00.400Z"  # hand: 1.8e9 s after 1970
+
+
+class Served:
+    """One server with one client, in a loop of its own; starting a server takes seconds."""
+
+    def __init__(self) -> None:
+        self.plan = site(opcua=free_port())
+        self.sent = samples(self.plan, "control-system")
+        self._runner = asyncio.Runner()
+        self._stack = AsyncExitStack()
+
+    def run(self, work: Coroutine[Any, Any, Result]) -> Result:
+        return self._runner.run(work)
+
+    async def open(self) -> None:
+        address = self.plan.sources["control-system"].address
+        self.wire = await self._stack.enter_async_context(
+            OpcuaWire(address, self.plan.units, "control-system")
+        )
+        self.client = await self._stack.enter_async_context(Client(address, timeout=5))
+        self.index = await self.client.get_namespace_index(NAMESPACE)
+        self.before_the_first_sample = await self.node("K-220.PT-2201").read_data_value(
+            raise_on_bad_status=False
+        )
+
+    def node(self, name: str) -> Node:
+        return self.client.get_node(f"ns={self.index};s={name}")
+
+    def close(self) -> None:
+        self.run(self._stack.aclose())
+        self._runner.close()
+
+
+@pytest.fixture(scope="module")
+def served() -> Iterator[Served]:
+    made = Served()
+    made.run(made.open())
+    yield made
+    made.close()
+
+
+def test_value_is_bad_until_the_first_sample(served: Served) -> None:
+    assert served.before_the_first_sample.StatusCode.value == ua.StatusCodes.BadWaitingForInitialData
+
+
+def test_every_node_of_the_control_system_is_the_plants_sample(served: Served) -> None:
+    async def check() -> None:
+        assert {s.tag.address for s in served.sent} == {i.address for i in served.plan.unit("K-220").inputs}
+        await served.wire.write(served.sent)
+        for sample in served.sent:
+            found = await served.node(sample.tag.address.rpartition("s=")[2]).read_data_value()
+            value = found.Value.Value
+            if found.Value.VariantType is ua.VariantType.Float:
+                assert value == np.float32(sample.value)
+            else:
+                assert value == sample.value
+                assert type(value) is type(sample.value)
+            assert found.StatusCode.is_good()
+            assert found.SourceTimestamp == datetime.fromtimestamp(NOW, UTC)
+
+    served.run(check())
+
+
+def test_nodes_say_unit_range_and_that_they_are_simulated(served: Served) -> None:
+    async def check() -> None:
+        nodes = await served.node("K-220.PT-2206").get_properties()
+        found = {(await n.read_browse_name()).Name: await n.read_value() for n in nodes}
+        assert found["EngineeringUnits"].DisplayName.Text == "barg"
+        assert (found["EURange"].Low, found["EURange"].High) == pytest.approx((0, 250))  # site file
+        assert await served.node("Ostmere.Simulated").read_value() is True
+
+    served.run(check())
+
+
+def test_client_can_neither_write_a_value_nor_add_a_node(served: Served) -> None:
+    async def check() -> None:
+        await served.wire.write(served.sent)
+        node = served.node("K-220.PT-2201")
+        before = await node.read_value()
+        with pytest.raises(BadUserAccessDenied):
+            await node.write_value(ua.Variant(1.0, ua.VariantType.Float))
+        with pytest.raises(BadUserAccessDenied):
+            await served.client.nodes.objects.add_object(served.index, "intruder")
+        assert await node.read_value() == before
+
+    served.run(check())
+
+
+def test_subscription_hears_a_change_and_not_a_repetition(served: Served) -> None:
+    """On-change tags rely on this: a word that stays is sent once."""
+
+    async def check() -> None:
+        heard: asyncio.Queue[float] = asyncio.Queue()
+
+        class Handler:
+            def datachange_notification(self, _node: object, value: float, _data: object) -> None:
+                heard.put_nowait(value)
+
+        [sample] = [s for s in served.sent if s.tag.tag == "PT-2201"]
+        await served.wire.write([sample])
+        subscription = await served.client.create_subscription(50, Handler())
+        await subscription.subscribe_data_change(served.node("K-220.PT-2201"))
+        async with asyncio.timeout(10):
+            assert await heard.get() == np.float32(sample.value)
+            await served.wire.write([Sample(tag=sample.tag, time=NOW + 1, value=sample.value)])
+            await served.wire.write([Sample(tag=sample.tag, time=NOW + 2, value=18.5)])
+            assert await heard.get() == 18.5
+        await subscription.delete()
+
+    served.run(check())
+
+
+@pytest.mark.parametrize(
+    ("address", "said"),
+    [
+        ("opc.tcp://0.0.0.0:4840/x", "loopback only"),
+        ("opc.tcp://192.0.2.7:4840/x", "loopback only"),
+        ("http://127.0.0.1:4840", "is not opc.tcp://host:port/path"),
+        ("opc.tcp://127.0.0.1/x", "is not opc.tcp://host:port/path"),
+    ],
+)
+def test_server_address_must_be_loopback_and_whole(address: str, said: str) -> None:
+    with pytest.raises(ValueError, match=said):
+        OpcuaWire(address, (), "control-system")
+
+
+def test_broker_address_must_be_mqtt() -> None:
+    with pytest.raises(ValueError, match="is not mqtt://host:port"):
+        MqttWire("http://127.0.0.1:1883", tags=1)
