@@ -138,19 +138,14 @@ def _conversion(
 ) -> units.Conversion | None:
     here = (*place, "unit")
     state = _STATE_UNITS.get(quantity.key)
-    if state is not None:
-        if block.unit != state:
-            reader.fault(here, f"'{state}' for the {quantity.words}")
-            return None
-    elif quantity.key == "flow" and _is_mass_flow(block.unit):
-        reader.fault(
-            here, "a molar or normal volume flow, e.g. Nm3/h", "a mass flow meter cannot be read yet"
-        )
+    if state is not None and block.unit != state:
+        reader.fault(here, f"'{state}' for the {quantity.words}")
         return None
     try:
         return units.conversion(block.unit, quantity.dimension, barometer_pa=reader.barometer_pa)
     except units.UnitError as error:
-        reader.fault(here, error.expected, error.hint)
+        mass = quantity.key == "flow" and _is_mass_flow(block.unit)
+        reader.fault(here, error.expected, "a mass flow meter cannot be read yet" if mass else error.hint)
         return None
 
 

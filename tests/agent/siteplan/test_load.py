@@ -5,6 +5,8 @@ import hashlib
 import json
 import math
 import re
+import subprocess
+import sys
 from collections.abc import Iterator
 from pathlib import Path
 from typing import Any
@@ -21,7 +23,7 @@ from agent.siteplan.load import load_site
 from agent.siteplan.plan import AlarmSetting, FlowReference, MqttVersion, SitePlan, SourceKind
 from agent.siteplan.schema import COMPONENTS
 from agent.siteplan.sources import covers
-from model import gas
+from model import gas, units
 from model.machine import EndState, Side
 
 ROOT = Path(__file__).resolve().parents[3]
@@ -265,6 +267,16 @@ def test_sources_keep_what_was_entered(ostmere: SitePlan) -> None:
     assert opcua.address == "opc.tcp://127.0.0.1:4840/ostmere"
 
 
+def test_reading_the_demo_site_loads_neither_pint_nor_the_gas_library() -> None:
+    """Both are slow to import, and the plant and the pages read the file too."""
+    code = (
+        "import sys; from agent.siteplan.load import load_site; load_site(sys.argv[1]);"
+        "sys.exit(bool({'pint', 'CoolProp'} & set(sys.modules)))"
+    )
+    command = [sys.executable, "-c", code, str(OSTMERE)]
+    assert subprocess.run(command, check=False, cwd=ROOT).returncode == 0
+
+
 def test_digest_is_of_the_text_as_read(ostmere: SitePlan) -> None:
     assert ostmere.text == OSTMERE.read_text(encoding="utf-8")
     assert ostmere.digest == hashlib.sha256(OSTMERE.read_bytes()).hexdigest()
@@ -429,4 +441,13 @@ def test_component_words_are_those_of_the_gas_model() -> None:
 
 
 def test_alarm_words_are_those_of_the_catalogue() -> None:
-    assert set(ALARMS) == set(CATALOGUE)
+    ours = {key: (s.dimension, s.deadband[0] if s.deadband else None) for key, s in ALARMS.items()}
+    theirs = {key: (a.setting_dimension, a.deadband_dimension) for key, a in CATALOGUE.items()}
+    assert ours == theirs
+
+
+def test_catalogue_settings_lie_within_the_bounds_of_the_site_file() -> None:
+    for key, alarm in CATALOGUE.items():
+        bounds = ALARMS[key]
+        low, high = (units.parse(text, bounds.dimension) for text in (bounds.low, bounds.high))
+        assert low <= alarm.setting <= high, key
