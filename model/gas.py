@@ -256,7 +256,7 @@ _STORED: Final = tuple(f.name for f in fields(GasSurface) if f.name not in {"mol
 
 def _read(path: Path, digest: str, domain: GasDomain) -> GasSurface | None:
     try:
-        with np.load(path, allow_pickle=False) as archive:
+        with path.open("rb") as file, np.load(file, allow_pickle=False) as archive:
             if str(archive["digest"]) != digest:
                 return None
             parts = {name: np.asarray(archive[name], np.float64) for name in _STORED}

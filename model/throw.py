@@ -25,8 +25,8 @@ from model.rodload import gas_load, inertia_load, reversal
 Array = NDArray[np.float64]
 Mask = NDArray[np.bool_]
 
-ANGLES: Final = 360
-"""Steps of a turn: power to 3e-5 and reversal to 0.005 degrees; peaks are sought between the steps."""
+ANGLES: Final = 480
+"""Steps of a turn: power to 3e-5 and reversal to 0.02 degrees; peaks are sought between the steps."""
 _OPENING_PASSES: Final = 3  # of false position inside one step; leaves 1e-4 degrees
 
 
