@@ -69,7 +69,7 @@ def test_first_light_sinks_suction_and_heats_the_discharge_through_its_thermowel
     assert float(rows[60]["PT-1101"]) < 25.4  # hand: 26 bar(a) in the header
     assert 19.7 < float(rows[200]["PT-1101"]) < 20.6  # hand: 21.3 bar(a) in the header
     hot = [k for k, row in rows.items() if float(row["TT-1102"]) > 120.0]
-    # 120 degC is 10 K before the entered limit; the gas is there at about 120 s, its thermowell a minute later
+    # 120 degC is 10 K before the entered limit; the gas is there at 120 s, its thermowell a minute later
     assert 150 < hot[0] < 210
     assert max(float(row["TT-1102"]) for row in rows.values()) < 130.0
 
