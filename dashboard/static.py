@@ -51,8 +51,9 @@ class CompressedFiles:
             return response
         response.direct_passthrough = False
         body = response.get_data()
+        response.close()  # the file behind it
         if len(body) < _SMALLEST_WORTH_BYTES:
-            return response
+            return _plain(body, response)
         packed = _Packed(
             body=gzip.compress(body, compresslevel=9, mtime=0),
             content_type=response.headers["Content-Type"],
@@ -74,6 +75,10 @@ class CompressedFiles:
             and (not request.query_string or request.args.keys() <= {"m", "v"})
             and len(self._packed) < 200
         )
+
+
+def _plain(body: bytes, response: Response) -> Response:
+    return Response(body, status=response.status_code, headers=response.headers)
 
 
 def _cache_control(response: Response) -> str:
