@@ -6,8 +6,6 @@ or re-expansion is one exponential.
 """
 
 from dataclasses import dataclass
-from functools import lru_cache
-from typing import Final
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -15,11 +13,9 @@ from numpy.typing import ArrayLike, NDArray
 from model.corrections import Corrections
 from model.kinematics import angle_of_travel, piston_travel, piston_travel_rate
 from model.machine import End, Side
+from model.valves import full_lift_loss, plate_loss
 
 Array = NDArray[np.float64]
-
-_TAPER: Final = 50.0  # preload dies away below 1/50 of full-lift flow, so that strokes join at dead centre
-_PLATE_POINTS: Final = 2049
 
 
 def volumetric_efficiency(
@@ -100,77 +96,6 @@ def volumetric_efficiency_from_temperatures(
     )
 
 
-def full_lift_loss(density_kg_m3: ArrayLike, speed_rad_s: ArrayLike, area_ratio: float) -> Array:
-    """Pressure loss of fully open valves, per square of the travel rate.
-
-    Parameters
-    ----------
-    density_kg_m3 : array_like
-        Density of the gas that passes. [kg/m3]
-    speed_rad_s : array_like
-        Speed of the crankshaft. [rad/s]
-    area_ratio : float
-        Effective flow area of the valves over piston area of the end. [-]
-
-    Returns
-    -------
-    ndarray
-        ``rho w^2 / (2 f^2)``; times the travel rate squared it is the loss. [Pa rad2/m2]
-
-    References
-    ----------
-    Quasi-steady incompressible flow through an orifice; any text on fluid mechanics.
-    """
-    return np.asarray(np.asarray(density_kg_m3) * np.asarray(speed_rad_s) ** 2 / (2 * area_ratio**2))
-
-
-def plate_loss(full_lift_loss_pa: Array, line_pressure_pa: Array, preload: float, full_lift: float) -> Array:
-    """Pressure loss of spring-loaded valve plates that lift no farther than the flow holds them.
-
-    Parameters
-    ----------
-    full_lift_loss_pa : ndarray
-        Loss the flow would have through fully open valves. [Pa]
-    line_pressure_pa : ndarray
-        Pressure in the line; broadcasts. [Pa]
-    preload : float
-        Pressure difference that just lifts a plate, over line pressure. [-]
-    full_lift : float
-        Pressure difference that lifts it fully, over line pressure; 0 for plates without springs. [-]
-
-    Returns
-    -------
-    ndarray
-        Loss. [Pa]
-
-    Notes
-    -----
-    At lift y (0 to 1) the springs hold ``P (p0 + (p1 - p0) y)`` and the flow needs ``full lift loss / y^2``.
-    Both are equal at the lift that solves ``y^2 (p0/p1 + (1 - p0/p1) y) = full lift loss / (p1 P)``. Inertia
-    of the plate is left out here; the opening is treated apart. Within a few degrees of dead centre, below
-    1/50 of the full-lift flow, the preload is tapered to nothing, so that one stroke joins the next.
-
-    References
-    ----------
-    Static balance of plate and springs; derived.
-    """
-    if full_lift <= 0:
-        return full_lift_loss_pa
-    x = full_lift_loss_pa / (full_lift * line_pressure_pa)
-    share = min(preload / full_lift, 1.0)
-    roots, lifts = _plate_table(share)
-    lift = np.interp(np.sqrt(np.minimum(x, 1.0)), roots, lifts)
-    held = line_pressure_pa * (preload * np.minimum(1.0, _TAPER * x) + (full_lift - preload) * lift)
-    return np.asarray(np.where(x >= 1, full_lift_loss_pa, held))
-
-
-@lru_cache(maxsize=64)
-def _plate_table(share: float) -> tuple[Array, Array]:
-    """Lift against the square root of the flow number: nearly straight, so 2 049 points give 1e-6."""
-    lift = np.linspace(0.0, 1.0, _PLATE_POINTS)
-    return np.sqrt(lift**2 * (share + (1 - share) * lift)), lift
-
-
 @dataclass(frozen=True, slots=True, eq=False, kw_only=True)
 class EndGeometry:
     """One end at a set of crank angles, the shape of which is free."""
@@ -184,7 +109,28 @@ class EndGeometry:
 
 
 def end_geometry(angle_rad: Array, end: End, stroke_m: float, rod_m: float) -> EndGeometry:
-    """An end at any crank angles, from the head-end dead centre."""
+    """Volumes and rates of an end.
+
+    Parameters
+    ----------
+    angle_rad : ndarray
+        Crank angles from the head-end dead centre. [rad]
+    end : End
+        The end.
+    stroke_m : float
+        Stroke. [m]
+    rod_m : float
+        Length of the connecting rod. [m]
+
+    Returns
+    -------
+    EndGeometry
+        Of the shape of the angles.
+
+    References
+    ----------
+    R. S. Khurmi, J. K. Gupta, *Theory of Machines*, chapter 15.
+    """
     travel = piston_travel(angle_rad, stroke_m, rod_m) / stroke_m
     rate = piston_travel_rate(angle_rad, stroke_m, rod_m)
     outgoing = np.mod(angle_rad, 2 * np.pi) < np.pi
@@ -245,10 +191,40 @@ def end_cycle(
     rod_m: float,
     natural_frequency_hz: float,
 ) -> tuple[EndCycle, Array]:
-    """Set up the cycle of an end; with it the volumetric efficiency (frames, 1) it has when it is loaded.
+    """Set up the cycle of an end, and the volumetric efficiency it has when it is loaded.
 
+    Parameters
+    ----------
+    end : End
+        The end.
+    path : GasPath
+        States of the gas, each part (frames, 1).
+    speed_rad_s : ndarray
+        (frames, 1) speed of the crankshaft. [rad/s]
+    held_open : ndarray of bool
+        (frames, 1) whether its suction valves are held open.
+    corrections : Corrections
+        How a real end departs from the ideal cycle.
+    stroke_m : float
+        Stroke. [m]
+    rod_m : float
+        Length of the connecting rod. [m]
+    natural_frequency_hz : float
+        Natural frequency of the valve plates on their springs. [Hz]
+
+    Returns
+    -------
+    tuple
+        The cycle, and the efficiency (frames, 1), 0 where the clearance gas fills the stroke. [-]
+
+    Notes
+    -----
     A plate starts late by about the time of its own period, in which the pressure runs past the line by
-    ``(w / wn) n (dlnV/dtheta) P``; from the true opening on that dies away with the volume swept.
+    ``(w / wn) n (dlnV/dtheta) P``; from the opening on that dies away with the logarithm of the volume.
+
+    References
+    ----------
+    R. Joel, *Basic Engineering Thermodynamics*, chapter 14 (the ideal cycle); the overshoot is derived.
     """
     ps, pd = path.suction_pressure_pa, path.discharge_pressure_pa
     log_ratio = np.log(pd / ps)
@@ -300,9 +276,29 @@ def _slope_at(end: End, volume: Array, stroke_m: float, rod_m: float) -> Array:
 
 
 def suction_stroke(cycle: EndCycle, log_volume: Array, travel_rate_m_rad: Array) -> tuple[Array, Array]:
-    """Pressure [Pa] while the volume grows, and a number that turns positive where the valve opens [Pa].
+    """Pressure of an end while its volume grows.
 
-    ``log_volume`` counts from the dead centre of the stroke. The larger of re-expansion and open line holds.
+    Parameters
+    ----------
+    cycle : EndCycle
+        The cycle, each part (frames, 1).
+    log_volume : ndarray
+        Natural logarithm of the volume over that at the start of the stroke. [-]
+    travel_rate_m_rad : ndarray
+        Magnitude of the travel rate of the piston. [m/rad]
+
+    Returns
+    -------
+    tuple of ndarray
+        Pressure, and open line less re-expansion, which turns positive where the valve opens. [Pa]
+
+    Notes
+    -----
+    The larger of re-expansion and open line holds. An end held open breathes through its suction valves.
+
+    References
+    ----------
+    R. Joel, *Basic Engineering Thermodynamics*, chapter 14 (the ideal cycle).
     """
     expansion = cycle.discharge_pressure_pa * np.exp(-cycle.expansion_exponent * log_volume)
     flow = cycle.suction_loss * travel_rate_m_rad**2
@@ -318,10 +314,30 @@ def suction_stroke(cycle: EndCycle, log_volume: Array, travel_rate_m_rad: Array)
 
 
 def discharge_stroke(cycle: EndCycle, log_volume: Array, travel_rate_m_rad: Array) -> tuple[Array, Array]:
-    """Pressure [Pa] while the volume shrinks, and a number that turns positive where the valve opens [Pa].
+    """Pressure of an end while its volume shrinks.
 
+    Parameters
+    ----------
+    cycle : EndCycle
+        The cycle, each part (frames, 1).
+    log_volume : ndarray
+        Natural logarithm of the volume at the start of the stroke over the present one. [-]
+    travel_rate_m_rad : ndarray
+        Magnitude of the travel rate of the piston. [m/rad]
+
+    Returns
+    -------
+    tuple of ndarray
+        Pressure, and compression less open line, which turns positive where the valve opens. [Pa]
+
+    Notes
+    -----
     The smaller of compression and open line holds. An end held open pushes its gas back through the suction
     valves, which the unloader holds at full lift.
+
+    References
+    ----------
+    R. Joel, *Basic Engineering Thermodynamics*, chapter 14 (the ideal cycle).
     """
     compression = cycle.suction_pressure_pa * np.exp(cycle.compression_exponent * log_volume)
     flow = cycle.discharge_loss * travel_rate_m_rad**2
@@ -339,7 +355,24 @@ def discharge_stroke(cycle: EndCycle, log_volume: Array, travel_rate_m_rad: Arra
 
 
 def end_pressure(cycle: EndCycle, geometry: EndGeometry) -> Array:
-    """Pressure [Pa] of an end at any set of angles."""
+    """Pressure of an end at any set of angles.
+
+    Parameters
+    ----------
+    cycle : EndCycle
+        The cycle.
+    geometry : EndGeometry
+        The angles.
+
+    Returns
+    -------
+    ndarray
+        Pressure. [Pa]
+
+    References
+    ----------
+    See `suction_stroke` and `discharge_stroke`.
+    """
     suction, _ = suction_stroke(cycle, geometry.expansion, geometry.travel_rate_m_rad)
     discharge, _ = discharge_stroke(cycle, geometry.compression, geometry.travel_rate_m_rad)
     return np.asarray(np.where(geometry.suction_stroke, suction, discharge))

@@ -241,7 +241,36 @@ def run_stage(
     *,
     angles: int = ANGLES,
 ) -> StageRun:
-    """Evaluate a stage over frames. Cylinders that are the same in every way are evaluated once."""
+    """Evaluate a stage over frames; cylinders that are the same in every way are evaluated once.
+
+    Parameters
+    ----------
+    unit : Unit
+        The nameplate.
+    stage : Stage
+        Which stage of it.
+    gas : GasSurface
+        Its gas.
+    corrections : Corrections
+        How its cylinders depart from the ideal cycle.
+    state : StageState
+        What is measured around it.
+    angles : int
+        Steps of a turn, even. [-]
+
+    Returns
+    -------
+    StageRun
+        Flow, power, temperature, and each throw. [SI]
+
+    Notes
+    -----
+    Cylinders side by side mix: the temperature is that of all their work over all their flow.
+
+    References
+    ----------
+    See `gas_path`, `discharge_temperature` and `model.throw`.
+    """
     frame, enthalpy = stage_frame(unit, gas, corrections, state)
     seen: dict[tuple[object, ...], Throw] = {}
     throws = {}

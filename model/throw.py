@@ -69,7 +69,7 @@ class EndRun:
 
 
 def end_runs(cylinder: Cylinder, frame: Frame, held_open: dict[Side, Mask]) -> tuple[EndRun, ...]:
-    """Set up the ends of a cylinder; held_open maps a side to (frames, 1)."""
+    """Set up the ends of a cylinder. ``held_open`` holds (frames, 1) for each side."""
     runs = []
     for end in cylinder.ends:
         cycle, efficiency = end_cycle(
@@ -82,7 +82,33 @@ def end_runs(cylinder: Cylinder, frame: Frame, held_open: dict[Side, Mask]) -> t
 
 
 def run_throw(cylinder: Cylinder, frame: Frame, held_open: dict[Side, Mask], angles: int = ANGLES) -> Throw:
-    """Evaluate a cylinder over frames."""
+    """Evaluate a cylinder over frames.
+
+    Parameters
+    ----------
+    cylinder : Cylinder
+        The cylinder.
+    frame : Frame
+        What it hangs on apart from itself.
+    held_open : dict
+        By side, (frames, 1): whether the end is held open.
+    angles : int
+        Steps of a turn, even. [-]
+
+    Returns
+    -------
+    Throw
+        Flow, power, loads and reversal. [SI]
+
+    Notes
+    -----
+    Power is the integral of pressure over volume at equal steps of the angle. Peaks are taken over those
+    steps and over the very angles at which valves open.
+
+    References
+    ----------
+    H. P. Bloch, J. J. Hoefner, *Reciprocating Compressors: Operation and Maintenance*, Gulf, 1996, p. 85.
+    """
     runs = end_runs(cylinder, frame, held_open)
     turns = frame.speed_rad_s[:, 0] / (2 * np.pi)
     traces, openings = [], []
@@ -116,7 +142,7 @@ def run_throw(cylinder: Cylinder, frame: Frame, held_open: dict[Side, Mask], ang
 
 
 def opening_angles(cylinder: Cylinder, frame: Frame, held_open: dict[Side, Mask]) -> Array:
-    """Crank angles (frames, openings) at which valves open; the loads have their corners there. [rad]"""
+    """Crank angles (frames, openings) at which valves open, where the loads have corners. [rad]"""
     found = []
     for run in end_runs(cylinder, frame, held_open):
         grid = _grid(run.end, frame.stroke_m, frame.rod_m, ANGLES)
@@ -127,7 +153,28 @@ def opening_angles(cylinder: Cylinder, frame: Frame, held_open: dict[Side, Mask]
 def loads_at(
     cylinder: Cylinder, runs: tuple[EndRun, ...], frame: Frame, angle_rad: Array
 ) -> tuple[Array, Array]:
-    """Gas load and inertia load at any crank angles, tension positive. [N]"""
+    """Gas load and inertia load at any crank angles.
+
+    Parameters
+    ----------
+    cylinder : Cylinder
+        The cylinder.
+    runs : tuple of EndRun
+        Its ends.
+    frame : Frame
+        What it hangs on apart from itself.
+    angle_rad : ndarray
+        (1 or frames, n) crank angles. [rad]
+
+    Returns
+    -------
+    tuple of ndarray
+        Gas load and inertia load (frames, n), tension positive. [N]
+
+    References
+    ----------
+    See `model.rodload`.
+    """
     return _loads(cylinder, runs, frame, angle_rad, None)
 
 

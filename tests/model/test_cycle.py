@@ -13,13 +13,12 @@ from model.cycle import (
     end_cycle,
     end_geometry,
     end_pressure,
-    full_lift_loss,
-    plate_loss,
     volumetric_efficiency,
     volumetric_efficiency_from_temperatures,
 )
 from model.machine import End, Side
 from model.stage import gas_path, isentropic_discharge_temperature
+from model.valves import full_lift_loss, plate_loss
 from tests.model.surfaces import natural_gas
 
 END = End(side=Side.HEAD, clearance=0.16, suction_area_ratio=0.06, discharge_area_ratio=0.06)

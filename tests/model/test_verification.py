@@ -108,7 +108,7 @@ def test_gas_load_rises_and_combined_load_does_not_as_suction_sinks() -> None:
     )
 
 
-# efficiency, kW of the stage, K, kN of pin tension and compression, of gas tension and compression, deg, share
+# efficiency, kW of the stage, K, kN (pin tension and compression, gas tension and compression), deg, share
 MAKE_UP = {
     ("stage1", "cylinder1"): (0.888, 862, 381.4, 136, 198, 148, 183, 174, 0.69),
     ("stage2", "cylinder3"): (0.885, 804, 377.4, 266, 355, 272, 339, 175, 0.75),
