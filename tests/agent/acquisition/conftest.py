@@ -195,6 +195,7 @@ class MqttPlant:
         self.port = port
         self._version = version
         self._publisher: Publisher | None = None
+        self.state_file: Path | None = None
 
     def start(self) -> None:
         self.child.start()
@@ -341,6 +342,7 @@ def mosquitto(free_port: int, tmp_path: Path) -> Iterator[Callable[[MqttVersion]
 
     def start(version: MqttVersion) -> MqttPlant:
         plant = MqttPlant(Child([program, "-c", str(settings)], says_up=False), free_port, version)
+        plant.state_file = tmp_path / "mosquitto.db"
         plant.start()
         started.append(plant)
         return plant

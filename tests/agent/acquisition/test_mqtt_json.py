@@ -70,7 +70,9 @@ def test_a_receipt_of_an_earlier_connection_does_nothing(
             await until(lambda: is_up(heard), "up")
             plant.send("PT", 1.0, time.time())
             await until(lambda: heard.readings, "a reading")
-            await asyncio.sleep(1.5)  # the broker writes its state once a second
+            plant.state_file.unlink(missing_ok=True)
+            plant.child.signal(signal.SIGUSR1)  # save now
+            await until(plant.state_file.exists, "the broker has written its state")
             await asyncio.to_thread(plant.kill)
             await until(lambda: not is_up(heard), "down")
             await asyncio.to_thread(plant.start)

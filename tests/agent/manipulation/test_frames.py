@@ -93,6 +93,13 @@ def test_an_input_sent_on_change_holds_for_days_while_its_source_is_up(plan: Uni
     assert math.isnan(value(lost, 5))
 
 
+def test_the_word_before_the_newest_is_kept_however_old(plan: UnitPlan, read: Read) -> None:
+    builder = FrameBuilder(plan)
+    builder.accept([read(5, 100.0, word="50"), read(5, 100.0 + 3 * HISTORY_S, word="100")], None)
+    frame = builder.frame(100 + 3 * HISTORY_S - 2, BOTH)
+    assert (value(frame, 5), quality(frame, 5)) == (1.0, Quality.GOOD)
+
+
 @pytest.mark.parametrize(
     ("place", "reading", "expected"),
     [
