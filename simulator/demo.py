@@ -22,6 +22,8 @@ from importlib.resources import files
 from importlib.util import find_spec
 from pathlib import Path
 from types import FrameType
+from typing import Any
+from zoneinfo import ZoneInfo
 
 from simulator.broker_main import MISSING
 from simulator.children import Child, Children, Death
@@ -200,16 +202,20 @@ def _is_live(url: str) -> bool:
         return False
 
 
-def _tell(url: str, waited_s: float, story: dict[str, object]) -> None:
+def _tell(url: str, waited_s: float, story: dict[str, Any]) -> None:
     _say(f"\nLive numbers of both units after {waited_s:.0f} s:  {url}/\n")
-    zone = datetime.now().astimezone().tzname()
-    _say(f"What will happen (local time, {zone}):")
-    rows = story["timetable"]
-    if isinstance(rows, list):
-        for at, text in rows:
-            _say(f"  {datetime.fromtimestamp(at).astimezone():%H:%M:%S}  {text}")
-    if isinstance(again := story.get("repeats_after_s"), int | float):
-        _say(f"  and the same again every {again / 60:.0f} minutes.")
+    site = ZoneInfo(story["time_zone"])
+    rows = [(datetime.fromtimestamp(at, site), text) for at, text in story["timetable"]]
+    differs = any(at.utcoffset() != at.astimezone().utcoffset() for at, _ in rows)
+    _say(
+        "What will happen (site time, as on the pages"
+        + ("; the clock here in brackets):" if differs else "):")
+    )
+    for at, text in rows:
+        here = f" ({at.astimezone():%H:%M:%S})" if differs else ""
+        _say(f"  {at:%H:%M:%S}{here}  {text}")
+    if story["repeats_after_s"] is not None:
+        _say(f"  and the same again every {story['repeats_after_s'] / 60:.0f} minutes.")
     _say("\nCtrl-C ends everything.")
 
 

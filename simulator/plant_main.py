@@ -127,7 +127,7 @@ def run(
         def began(at: float) -> None:
             _say("plant up")
             if timetable:
-                _say(_timetable(story, at, pace))
+                _say(_timetable(story, at, pace, plan.time_zone))
 
         asyncio.run(_until_signalled(plant, plan, began=began, ledger=ledger, duration_s=duration_s))
     except (SiteFileError, ScenarioError, PlantMismatchError, PlantError, ValueError) as error:
@@ -143,10 +143,11 @@ async def _until_signalled(
     await serve(plant, plan, stop=stop, began=began, ledger=ledger, duration_s=duration_s)
 
 
-def _timetable(story: Scenario, start: float, pace: float) -> str:
+def _timetable(story: Scenario, start: float, pace: float, time_zone: str) -> str:
     return json.dumps(
         {
             "timetable": [(start + after, text) for after, text in story.real_timetable(pace)],
+            "time_zone": time_zone,
             "repeats_after_s": None if story.repeat is None else story.repeat.real_s(pace),
         }
     )

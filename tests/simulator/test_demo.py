@@ -95,7 +95,11 @@ def page() -> Iterator[Ports]:
         thread.join()
 
 
-STORY = {"timetable": [[1_800_000_000.0, "K-110: something"]], "repeats_after_s": 720.0}
+STORY = {
+    "timetable": [[1_800_000_000.0, "K-110: something"]],
+    "time_zone": "Asia/Kolkata",
+    "repeats_after_s": 720.0,
+}
 
 
 @pytest.fixture
@@ -109,6 +113,16 @@ def stand_ins(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> tuple[Program,
     return (Program(name="plant", words=("plant_stand_in",)),)
 
 
+@pytest.fixture
+def clock_here_is_utc() -> Iterator[None]:
+    with pytest.MonkeyPatch.context() as patch:
+        patch.setenv("TZ", "UTC")
+        time.tzset()
+        yield
+    time.tzset()
+
+
+@pytest.mark.usefixtures("clock_here_is_utc")
 def test_live_page_is_told_with_address_timetable_and_mark_and_ctrl_c_ends_all(
     monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str], stand_ins: tuple[Program, ...]
 ) -> None:
@@ -136,7 +150,8 @@ def test_live_page_is_told_with_address_timetable_and_mark_and_ctrl_c_ends_all(
     text = "\n".join(said)
     assert "INVENTED plant" in text
     assert f"{ports.url}/" in text
-    assert "K-110: something" in text
+    # hand: 1.8e9 s is 08:00:00 UTC, five and a half hours more at this site; the clock here is set to UTC
+    assert "13:30:00 (08:00:00)  K-110: something" in text
     assert "the same again every 12 minutes" in text
     assert said[-1] == "All ended."
     assert not folders[0].exists()
