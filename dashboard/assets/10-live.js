@@ -14,6 +14,7 @@ window.throwline = (() => {
   const pages = new Map();
   const loaded = performance.now();
   let blob = null;
+  let pagesAtLoad = null;
   let etag = null;
   let inFlight = false;
   let timer = null;
@@ -180,6 +181,12 @@ window.throwline = (() => {
     if (unseen) box.append(element("strong", "", `${unseen} to acknowledge`));
   }
 
+  function showNote() {
+    const box = byId("agent-note");
+    show(box, blob.note !== "");
+    write(box, blob.note);
+  }
+
   function showTitle(page) {
     const open = blob ? blob.alarms.filter((a) => a.unacknowledged).length : 0;
     const mark = open ? `(${open}) ` : "";
@@ -193,6 +200,7 @@ window.throwline = (() => {
     showAge();
     if (!blob || !page) return;
     showCounts();
+    showNote();
     fillNumbers(page);
     const own = pages.get(page.dataset.page);
     if (own) own(blob, page);
@@ -218,7 +226,8 @@ window.throwline = (() => {
 
   function take(next) {
     // Another site file or another version of these pages: the layout on screen no longer fits the blob.
-    if (blob && blob.pages !== next.pages && mayReload()) location.reload();
+    pagesAtLoad ??= next.pages;
+    if (pagesAtLoad !== next.pages && mayReload()) location.reload();
     blob = next;
   }
 

@@ -69,7 +69,7 @@ def line(
         "mode": "lines",
         "name": name,
         "y": rounded(y),
-        "line": {"color": colour, "width": width, "dash": dash},
+        "line": {"color": colour, "width": width, "dash": dash, "simplify": False},  # peaks are corners
     }
 
 

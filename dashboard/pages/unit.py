@@ -135,9 +135,12 @@ def _cell(plan: UnitPlan, subject: str, key: str) -> Component:
     entry = plan.input(name)
     if entry is None and QUANTITIES[key].kind is Kind.MEASURED:
         return html.Td("not measured", className="numeric quiet")
-    children = [live_span(name, plan.id)]
-    if QUANTITIES[key].has_uncertainty:
-        children.append(live_span(name + UNCERTAINTY_SUFFIX, plan.id, "band"))
+    # An empty band keeps its place, so that the numbers of a column stand below each other.
+    has_band = QUANTITIES[key].has_uncertainty
+    band = (
+        live_span(name + UNCERTAINTY_SUFFIX, plan.id, "band") if has_band else html.Span("", className="band")
+    )
+    children = [live_span(name, plan.id), band]
     more: dict[str, Any] = {"title": f"{entry.tag}, {entry.tap}"} if entry is not None else {}
     return html.Td(children, className="numeric", **more)
 
