@@ -1,10 +1,13 @@
 """What only the MQTT source does: sessions, acknowledgement after the commit, the broker's window."""
 
 import asyncio
+import contextlib
 import re
 import signal
+import socket
+import threading
 import time
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
 from typing import Any
 
 import pytest
@@ -251,21 +254,38 @@ def test_a_broker_of_another_version_is_told_and_not_spoken_to_in_an_older_one(
     asyncio.run(scenario())
 
 
-def test_a_refusal_of_the_broker_is_told(
-    free_port: int, make_input: Callable[..., Input], listening: Any, until: Any
-) -> None:
-    async def refuse(reader: asyncio.StreamReader, writer: asyncio.StreamWriter) -> None:
-        await reader.read(100)
-        writer.write(bytes.fromhex("20020005"))  # source: MQTT 3.1.1 section 3.2, return code 5
-        await writer.drain()
-        writer.close()
+@pytest.fixture
+def refusing_port() -> Iterator[int]:
+    """A port where every connection is answered with "not authorized"."""
+    listener = socket.create_server(("127.0.0.1", 0))
 
+    def serve() -> None:
+        while True:
+            try:
+                connection, _ = listener.accept()
+            except OSError:  # the listener is shut down
+                return
+            with connection, contextlib.suppress(OSError):  # the source may be gone already
+                connection.recv(100)
+                connection.sendall(bytes.fromhex("20020005"))  # source: MQTT 3.1.1 section 3.2, return code 5
+
+    thread = threading.Thread(target=serve)
+    thread.start()
+    yield int(listener.getsockname()[1])
+    listener.shutdown(socket.SHUT_RDWR)
+    listener.close()
+    thread.join()
+
+
+def test_a_refusal_of_the_broker_is_told(
+    refusing_port: int, make_input: Callable[..., Input], listening: Any, until: Any
+) -> None:
     async def scenario() -> None:
         source = build_source(
             Source(
                 name="plant",
                 kind=SourceKind.MQTT_JSON,
-                address=f"mqtt://127.0.0.1:{free_port}",
+                address=f"mqtt://127.0.0.1:{refusing_port}",
                 mqtt_version=MqttVersion.V311,
                 client_id="throwline-test",
                 topics=("site/#",),
@@ -273,7 +293,7 @@ def test_a_refusal_of_the_broker_is_told(
             (make_input("PT"),),
             SystemClock(),
         )
-        async with await asyncio.start_server(refuse, "127.0.0.1", free_port), listening(source) as heard:
+        async with listening(source) as heard:
             await until(lambda: heard.source.status(0.0).state is LinkState.DOWN, "down")
             assert "refused the connection: Not authorized" in heard.source.status(time.time()).detail
 
