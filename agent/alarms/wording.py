@@ -45,7 +45,7 @@ def raised(unit: str, alarm: AlarmType, found: Sight, sights: Sequence[Sight]) -
         - {subject_words(found.point.subject)}
     )
     others = f" Also past it: {', '.join(also)}." if also else ""
-    return f"{unit}. {alarm.words}. {_numbers(alarm, found)}{others} What to do: {alarm.action}"
+    return f"{unit}. {alarm.words}. {_numbers(alarm, found)}{others}"
 
 
 def returned(unit: str, alarm: AlarmType, found: Sight | None, state: AlarmState, *, stopped: bool) -> str:

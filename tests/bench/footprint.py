@@ -21,14 +21,16 @@ def _tree(pid: int) -> list[psutil.Process]:
 
 def _pss_mb(processes: Sequence[psutil.Process]) -> dict[str, float]:
     """PSS of each process, by the last words of its command line."""
-    return {_label(p): p.memory_full_info().pss / 1e6 for p in processes}
+    return {f"{_label(p)} ({p.pid})": p.memory_full_info().pss / 1e6 for p in processes}
 
 
 def _label(process: psutil.Process) -> str:
+    """What the process is: the words behind the leash that its parent holds, else the demo itself."""
     words = process.cmdline()
-    return next(
-        (w for w in words if w in {"agent", "dashboard"} and words[words.index(w) - 1] != "-m"), None
-    ) or next((w for w in words if w.startswith("simulator.")), "demo")
+    if "simulator.leash" not in words:
+        return "demo"
+    place = words.index("simulator.leash") + 1
+    return words[place + 1] if words[place] == "agent" else words[place]
 
 
 def _cpu_seconds(processes: Sequence[psutil.Process]) -> float:

@@ -68,29 +68,25 @@ def test_raised_after_its_delay_once_with_all_an_operator_needs(engine: LimitAla
     assert event.text == (
         "K-1. Gas load in compression high. Cylinder 1: 168.0 kN by estimate, plus or minus 3.0 kN (two "
         "standard uncertainties). The upper end of that counts: the alarm point is 161.5 kN, which is 95 % "
-        "of the limit of 170.0 kN (sheet 7 (invented), entered by R. Fenn). What to do: Raise the suction "
-        "pressure or lower the discharge pressure of this stage. Change the load step only to one that the "
-        "machine's procedure permits at the present pressures, for rod load and for reversal: unloading an "
-        "end can raise the peak load."
+        "of the limit of 170.0 kN (sheet 7 (invented), entered by R. Fenn)."
     )
 
 
 def test_temperature_and_reversal_in_words(engine: LimitAlarms, machine: Any) -> None:
     hot = {"stage2.discharge_temperature": 403.15 - 8.64}
     (event,) = run(engine, machine, range(61), hot)
-    assert event.text.startswith(
+    assert event.text == (
         "K-1. Discharge temperature near its limit. Stage 2: 121.4 °C measured, 8.6 K left to the limit of "
-        "130.0 °C (sheet 7 (invented), entered by R. Fenn). What to do: Lower the pressure ratio of this"
+        "130.0 °C (sheet 7 (invented), entered by R. Fenn)."
     )
     assert event.value == pytest.approx(394.51, abs=1e-4)
     turned = {"cylinder2.reversal_degrees": 0.6283, "cylinder1.reversal_percent": 0.021}  # 36 deg
     *_, event = run(engine, machine, range(61, 400), turned)
     assert (event.alarm, event.subject) == ("reversal", "cylinder2")
-    assert event.text.startswith(
+    assert event.text == (
         "K-1. Load reversal below its minimum. Cylinder 2: duration 36° by estimate, plus or minus 2° (two "
         "standard uncertainties). The lower end of that counts: the alarm point is the minimum of 40° "
-        "(sheet 7 (invented), entered by R. Fenn). Also past it: cylinder 1. What to do: Return to the last "
-        "permitted load step."
+        "(sheet 7 (invented), entered by R. Fenn). Also past it: cylinder 1."
     )
 
 
