@@ -16,6 +16,7 @@ from collections.abc import Collection, Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Final
 
+from agent.acquisition.receipts import HeldReceipts
 from agent.alarms.limits import LimitAlarms
 from agent.database import StoreError
 from agent.journal.fold import states
@@ -105,7 +106,7 @@ class Pipeline:
         }
         self._backlog: list[_Judged] = []
         self._unwritten: list[AlarmEvent] = []
-        self._receipts: list[tuple[float, Receipt]] = []
+        self._held = HeldReceipts()
         self._late_receipts: list[Receipt] = []
         self._last_tick = 0
         self._pruned = -math.inf
@@ -160,12 +161,10 @@ class Pipeline:
                 if line.frames.accept((reading,), self._last_tick):
                     line.late.append(reading)
                     late = True
-            if reading.receipt is None:
-                continue
-            if late:
+            if not late:
+                self._held.hold((reading,))
+            elif reading.receipt is not None:
                 self._late_receipts.append(reading.receipt)
-            else:
-                self._receipts.append((reading.source_time, reading.receipt))
 
     @property
     def late_waiting(self) -> int:
@@ -217,9 +216,7 @@ class Pipeline:
         self._last_tick = due
         if not self._commit(fresh, sources, now):
             return ()
-        released = tuple(r for at, r in self._receipts if at <= due)
-        self._receipts = [(at, r) for at, r in self._receipts if at > due]
-        return released
+        return self._held.release(due)
 
     def _evaluate(self, ticks: Iterable[int], up: Collection[str]) -> list[_Judged]:
         fresh = []
