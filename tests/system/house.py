@@ -19,6 +19,18 @@ ROOT = Path(__file__).resolve().parents[2]
 DEMO_SITE = ROOT / "simulator" / "sites" / "ostmere.yaml"
 
 
+def quick_alarms(folder: Path) -> Path:
+    """The demo site with alarm delays of 3 s, so that a test need not wait a minute."""
+    text = DEMO_SITE.read_text(encoding="utf-8")
+    keys = ("gas_load_compression", "discharge_temperature", "reversal")
+    delays = "".join(f"      {key}: {{on_delay: 3 s}}\n" for key in keys)
+    path = folder / "site.yaml"
+    path.write_text(
+        text.replace("    load_steps:\n", f"    alarms:\n{delays}    load_steps:\n"), encoding="utf-8"
+    )
+    return path
+
+
 def free_port() -> int:
     with socket.socket() as probe:
         probe.bind(("127.0.0.1", 0))

@@ -17,24 +17,14 @@ from agent.records import AlarmState, EventKind, Quality
 from agent.siteplan.load import load_site
 from agent.siteplan.plan import Input, SitePlan
 from agent.storage.sqlite_series import SeriesReader
-from tests.system.house import DEMO_SITE, House, house, wait_for
+from tests.system.house import House, house, quick_alarms, wait_for
 
 KILLS = 10
 
 
 @pytest.fixture(scope="module")
 def quick_site(tmp_path_factory: pytest.TempPathFactory) -> Path:
-    """The demo site with short alarm delays, so that alarms come and go between the kills."""
-    text = DEMO_SITE.read_text(encoding="utf-8")
-    delays = "".join(
-        f"      {key}: {{on_delay: 3 s}}\n"
-        for key in ("gas_load_compression", "discharge_temperature", "reversal")
-    )
-    path = tmp_path_factory.mktemp("site") / "site.yaml"
-    path.write_text(
-        text.replace("    load_steps:\n", f"    alarms:\n{delays}    load_steps:\n"), encoding="utf-8"
-    )
-    return path
+    return quick_alarms(tmp_path_factory.mktemp("site"))
 
 
 def _ledger(path: Path) -> dict[str, list[tuple[float, float | str]]]:
