@@ -23,7 +23,7 @@ class Sample:
 
     tag: Input
     time: float  # unix seconds, UTC
-    value: float | bool | str
+    value: float | bool | str | None  # None: the instrument gives none
 
 
 class Plant:

@@ -15,11 +15,12 @@ from pathlib import Path
 
 from agent.siteplan.errors import SiteFileError
 from agent.siteplan.load import load_site
-from agent.siteplan.plan import SitePlan, SourceKind
+from agent.siteplan.plan import SitePlan, Source, SourceKind
 from simulator.plant import Plant, PlantMismatchError, Sample
 from simulator.scenario import Scenario, ScenarioError, load_scenario
 from simulator.serve_mqtt import MqttWire
 from simulator.serve_opcua import OpcuaWire
+from simulator.serve_sparkplug import SparkplugWire
 from simulator.steady_table import MACHINES
 from simulator.stopping import stop_on_signals
 
@@ -34,7 +35,7 @@ class PlantError(Exception):
 
 @dataclass(kw_only=True)
 class _Wires:
-    mqtt: dict[str, MqttWire] = field(default_factory=dict)
+    mqtt: dict[str, MqttWire | SparkplugWire] = field(default_factory=dict)
     opcua: dict[str, OpcuaWire] = field(default_factory=dict)
 
     @property
@@ -49,18 +50,22 @@ class _Wires:
 
     async def open(self, site: SitePlan, ledger: Path | None, stack: AsyncExitStack) -> None:
         for source in site.sources.values():
-            tags = sum(i.source == source.name for u in site.units for i in u.inputs)
+            tags = [i for u in site.units for i in u.inputs if i.source == source.name]
             if source.kind is SourceKind.MQTT_JSON:
-                mqtt = MqttWire(source.address, tags=tags, ledger=ledger)
-                mqtt.open()
-                stack.push_async_callback(asyncio.to_thread, mqtt.close)
-                self.mqtt[source.name] = mqtt
+                self._join(source, MqttWire(source.address, tags=len(tags), ledger=ledger), stack)
+            elif source.kind is SourceKind.MQTT_SPARKPLUG:
+                self._join(source, SparkplugWire(source.address, group=source.group, tags=tags), stack)
             else:
                 wire = OpcuaWire(source.address, site.units, source.name)
                 try:
                     self.opcua[source.name] = await stack.enter_async_context(wire)
                 except OSError as error:
                     raise PlantError(f"cannot serve {source.address}: {error.strerror or error}") from None
+
+    def _join(self, source: Source, wire: MqttWire | SparkplugWire, stack: AsyncExitStack) -> None:
+        wire.open()
+        stack.push_async_callback(asyncio.to_thread, wire.close)
+        self.mqtt[source.name] = wire
 
 
 async def serve(

@@ -123,4 +123,5 @@ class MqttWire:
 def payload(sample: Sample) -> str:
     """One message."""
     when = datetime.fromtimestamp(sample.time, UTC).isoformat(timespec="milliseconds").replace("+00:00", "Z")
-    return json.dumps({"value": sample.value, "time": when, "quality": "good", "simulated": True})
+    quality = "bad" if sample.value is None else "good"
+    return json.dumps({"value": sample.value, "time": when, "quality": quality, "simulated": True})

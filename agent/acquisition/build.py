@@ -4,6 +4,7 @@ from collections.abc import Sequence
 from typing import assert_never
 
 from agent.acquisition.mqtt_json import MqttJsonSource
+from agent.acquisition.mqtt_sparkplug import MqttSparkplugSource
 from agent.acquisition.opcua import OpcUaSource
 from agent.acquisition.source import PlantSource
 from agent.clock import Clock
@@ -29,6 +30,8 @@ def build_source(source: Source, inputs: Sequence[Input], clock: Clock) -> Plant
     match source.kind:
         case SourceKind.MQTT_JSON:
             return MqttJsonSource(source, own, clock)
+        case SourceKind.MQTT_SPARKPLUG:
+            return MqttSparkplugSource(source, own, clock)
         case SourceKind.OPCUA:
             return OpcUaSource(source, own, clock)
         case _:

@@ -9,13 +9,7 @@ from datetime import datetime
 from types import MappingProxyType
 from typing import Final, NoReturn
 
-from agent.acquisition.rejection import (
-    PAST_LIMIT_S,
-    Rejected,
-    Rejection,
-    check_not_future,
-    value_and_word,
-)
+from agent.acquisition.rejection import Rejected, Rejection, check_time, value_and_word
 from agent.records import Quality, Reading
 from agent.siteplan.plan import Input, Source
 
@@ -41,7 +35,7 @@ def decode(payload: bytes, entry: Input, source: Source, received_time: float) -
         fields = _fields(payload)
         quality = _quality(fields.get(source.quality_field, _MISSING))
         source_time = _source_time(fields.get(source.time_field, _MISSING), source.time_field)
-        _check_time(entry, source_time, received_time)
+        check_time(entry, source_time, received_time)
         value: float | None = None
         word: str | None = None
         if quality is not Quality.BAD:  # bad never yields a value, whatever stands there
@@ -130,9 +124,3 @@ def _iso_time(text: str) -> float:
         return moment.timestamp()
     except (ValueError, OverflowError):
         raise Rejected("the time is not ISO 8601") from None
-
-
-def _check_time(entry: Input, source_time: float, received_time: float) -> None:
-    check_not_future(source_time, received_time)
-    if source_time < received_time - PAST_LIMIT_S and not entry.on_change:
-        raise Rejected(f"its time is more than {PAST_LIMIT_S / 86400:.0f} days ago")

@@ -71,3 +71,10 @@ def value_and_word(entry: Input, raw: object) -> tuple[float | None, str | None]
 def check_not_future(source_time: float, received_time: float) -> None:
     if source_time > received_time + FUTURE_LIMIT_S:
         raise Rejected(f"future: its time is more than {FUTURE_LIMIT_S:.0f} s ahead")
+
+
+def check_time(entry: Input, source_time: float, received_time: float) -> None:
+    """Neither ahead of the agent's clock nor older than what the store could still take."""
+    check_not_future(source_time, received_time)
+    if source_time < received_time - PAST_LIMIT_S and not entry.on_change:
+        raise Rejected(f"its time is more than {PAST_LIMIT_S / 86400:.0f} days ago")

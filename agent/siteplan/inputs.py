@@ -20,6 +20,7 @@ _NEEDED: Final = ("suction_pressure", "discharge_pressure", "suction_temperature
 _STATE_UNITS: Final = {"load_step": "word", "run_signal": "switch"}
 _DIFFERENCES: Final = {"pressure": "pressure_difference", "temperature": "temperature_difference"}
 _NODE_ID: Final = re.compile(r"((nsu=[^;]+|ns=\d+);)?(i=\d+|s=.+|g=[0-9A-Fa-f-]{36}|b=.+)")
+_METRIC: Final = re.compile(r"[^+/#]+/[^+/#]*/.+")
 _OF_SPAN: Final = re.compile(r"(?P<share>.*%)\s*of\s+span")
 _MOST_INACCURATE: Final = 0.2  # of span; more is a slip of the pen
 # Reference state that a unit of flow has in its name: K, Pa.
@@ -126,6 +127,10 @@ def _check_address(reader: Reader, place: Place, address: str, source: Source) -
     if source.kind is SourceKind.OPCUA:
         if not _NODE_ID.fullmatch(address):
             reader.fault(place, "a node id", "e.g. nsu=urn:maker:plant;s=K-110.PT-1101 or ns=2;i=1001")
+    elif source.kind is SourceKind.MQTT_SPARKPLUG:
+        if not _METRIC.fullmatch(address):
+            expected = "<edge node>/<device>/<metric>"
+            reader.fault(place, expected, "a metric of the edge node itself: <edge node>//<metric>")
     elif "+" in address or "#" in address:
         reader.fault(place, "one topic", "wildcards stand in the topics of the source")
     elif source.topics and not any(covers(topic, address) for topic in source.topics):

@@ -16,7 +16,7 @@ from agent.siteplan.errors import SiteFileError
 from agent.siteplan.inputs import read_flow_reference, read_inputs
 from agent.siteplan.nameplate import read_frame, read_gas, read_limits, read_load_steps, read_stages
 from agent.siteplan.notices import unit_notices, unused_sources
-from agent.siteplan.plan import SitePlan, Source, UnitPlan
+from agent.siteplan.plan import SitePlan, Source, SourceKind, UnitPlan
 from agent.siteplan.reader import Reader, closest
 from agent.siteplan.schema import SCHEMA, FileBlock, SiteBlock, UnitBlock
 from agent.siteplan.sources import check_address, read_sources
@@ -114,7 +114,7 @@ def _readdressed(
 
 def _with_topics(source: Source, plans: tuple[UnitPlan, ...]) -> Source:
     """Without filters of its own a source subscribes to exactly the topics its inputs name."""
-    if source.topics or not source.client_id:
+    if source.topics or source.kind is not SourceKind.MQTT_JSON:
         return source
     topics = {i.address: None for plan in plans for i in plan.inputs if i.source == source.name}
     return replace(source, topics=tuple(topics))

@@ -11,6 +11,7 @@ from model.quantities import QUANTITIES, UNCERTAINTY_SUFFIX, Kind, Scope, series
 
 class SourceKind(StrEnum):
     MQTT_JSON = "mqtt_json"
+    MQTT_SPARKPLUG = "mqtt_sparkplug"
     OPCUA = "opcua"
 
 
@@ -26,9 +27,12 @@ class Source:
     name: str
     kind: SourceKind
     address: str
-    # mqtt_json only
+    # both kinds of MQTT
     mqtt_version: MqttVersion = MqttVersion.V5
     client_id: str = ""
+    # mqtt_sparkplug only
+    group: str = ""
+    # mqtt_json only
     topics: tuple[str, ...] = ()  # filters subscribed to
     value_field: str = "value"
     time_field: str = "time"
@@ -46,7 +50,7 @@ class Input:
     subject: str  # "unit", "stage1", ...
     tag: str  # the plant's name for it
     source: str
-    address: str  # topic or node id
+    address: str  # topic, node id, or <edge node>/<device>/<metric>
     unit: str  # the plant's unit, as entered
     scale: float
     offset: float

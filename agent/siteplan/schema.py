@@ -109,6 +109,7 @@ Identity = Annotated[
     str, _pattern(r"[A-Za-z0-9][A-Za-z0-9_-]{0,39}", "letters, digits, - and _, at most 40, e.g. K-110")
 ]
 FieldName = Annotated[str, _pattern(r"\S+", "the name of a field, e.g. value")]
+Level = Annotated[str, _pattern(r"[^+/#]+", "one name without +, / and #")]
 Whole = Annotated[int, BeforeValidator(_whole)]
 Count = Annotated[Whole, Field(ge=1, le=99)]
 Bore = Annotated[float, _si("length", "20 mm", "2 m")]
@@ -158,6 +159,7 @@ class SourceBlock(Block):
     address: Text
     mqtt_version: MqttVersion | None = None
     client_id: Text | None = None
+    group: Level | None = None
     topics: Annotated[list[Text], Field(min_length=1)] | None = None
     value_field: FieldName | None = None
     time_field: FieldName | None = None

@@ -10,12 +10,29 @@ from agent.siteplan.plan import MqttVersion, Source, SourceKind
 from agent.siteplan.reader import Reader
 from agent.siteplan.schema import SourceBlock
 
-_SCHEMES: Final = {SourceKind.MQTT_JSON: "mqtt", SourceKind.OPCUA: "opc.tcp"}
+_SCHEMES: Final = {
+    SourceKind.MQTT_JSON: "mqtt",
+    SourceKind.MQTT_SPARKPLUG: "mqtt",
+    SourceKind.OPCUA: "opc.tcp",
+}
 _EXAMPLES: Final = {
     SourceKind.MQTT_JSON: "an address such as mqtt://host:1883",
+    SourceKind.MQTT_SPARKPLUG: "an address such as mqtt://host:1883",
     SourceKind.OPCUA: "an address such as opc.tcp://host:4840/path",
 }
-_MQTT_ONLY: Final = ("mqtt_version", "client_id", "topics", "value_field", "time_field", "quality_field")
+_JSON_ONLY: Final = ("topics", "value_field", "time_field", "quality_field")
+# Keys of a source beyond kind and address that each kind does not take, and the words for those it does.
+_FOREIGN: Final = {
+    SourceKind.MQTT_JSON: (("group",), "no group: that is a key of kind mqtt_sparkplug"),
+    SourceKind.MQTT_SPARKPLUG: (
+        _JSON_ONLY,
+        "only keys of kind mqtt_sparkplug: kind, address, group, mqtt_version and client_id",
+    ),
+    SourceKind.OPCUA: (
+        ("mqtt_version", "client_id", "group", *_JSON_ONLY),
+        "only keys of kind opcua: kind and address",
+    ),
+}
 
 
 def read_sources(
@@ -30,11 +47,7 @@ def read_sources(
         if block is None:
             continue
         good = check_address(reader, (*here, "address"), block.kind, block.address)
-        source = (
-            _opcua(reader, here, name, block)
-            if block.kind is SourceKind.OPCUA
-            else _mqtt(reader, here, name, block, site_name)
-        )
+        source = _source(reader, here, name, block, site_name)
         if source is None or not good:
             continue
         sources[name] = source
@@ -62,20 +75,51 @@ def check_address(reader: Reader, place: Place, kind: SourceKind, address: str) 
     if url.scheme != _SCHEMES[kind] or not url.hostname or port == 0:
         reader.fault(place, _EXAMPLES[kind], value=repr(address))
         return False
-    if kind is SourceKind.MQTT_JSON and (url.path.strip("/") or url.query):
-        reader.fault(place, _EXAMPLES[kind], "no path: topics have a key of their own", value=repr(address))
+    if kind is not SourceKind.OPCUA and (url.path.strip("/") or url.query):
+        hint = (
+            "topics have a key of their own" if kind is SourceKind.MQTT_JSON else "group is a key of its own"
+        )
+        reader.fault(place, _EXAMPLES[kind], f"no path: {hint}", value=repr(address))
         return False
     return True
 
 
-def _opcua(reader: Reader, place: Place, name: str, block: SourceBlock) -> Source | None:
-    foreign = [key for key in _MQTT_ONLY if getattr(block, key) is not None]
+def _source(reader: Reader, place: Place, name: str, block: SourceBlock, site_name: str) -> Source | None:
+    keys, expected = _FOREIGN[block.kind]
+    foreign = [key for key in keys if getattr(block, key) is not None]
     for key in foreign:
-        reader.fault((*place, key), "only keys of kind opcua: kind and address", value="")
-    return None if foreign else Source(name=name, kind=block.kind, address=block.address)
+        reader.fault((*place, key), expected, value="")
+    if block.kind is SourceKind.MQTT_JSON:
+        source = _mqtt_json(reader, place, name, block, site_name)
+    elif block.kind is SourceKind.MQTT_SPARKPLUG:
+        source = _mqtt_sparkplug(reader, place, name, block, site_name)
+    else:
+        source = Source(name=name, kind=block.kind, address=block.address)
+    return None if foreign else source
 
 
-def _mqtt(reader: Reader, place: Place, name: str, block: SourceBlock, site_name: str) -> Source | None:
+def _mqtt_sparkplug(
+    reader: Reader, place: Place, name: str, block: SourceBlock, site_name: str
+) -> Source | None:
+    if block.group is None:
+        if "group" not in reader.keys(place):
+            reader.fault((*place, "group"), "the Sparkplug group whose edge nodes are read", value="")
+        return None
+    return Source(
+        name=name,
+        kind=block.kind,
+        address=block.address,
+        mqtt_version=block.mqtt_version or MqttVersion.V5,
+        client_id=block.client_id or _client_id(site_name, name),
+        group=block.group,
+    )
+
+
+def _client_id(site_name: str, name: str) -> str:
+    return _slug(f"throwline-{site_name}-{name}")
+
+
+def _mqtt_json(reader: Reader, place: Place, name: str, block: SourceBlock, site_name: str) -> Source | None:
     topics = tuple(block.topics or ())
     wrong = [index for index, topic in enumerate(topics) if not _is_filter(topic)]
     for index in wrong:
@@ -89,7 +133,7 @@ def _mqtt(reader: Reader, place: Place, name: str, block: SourceBlock, site_name
         kind=block.kind,
         address=block.address,
         mqtt_version=block.mqtt_version or MqttVersion.V5,
-        client_id=block.client_id or _slug(f"throwline-{site_name}-{name}"),
+        client_id=block.client_id or _client_id(site_name, name),
         topics=topics,
         value_field=block.value_field or "value",
         time_field=block.time_field or "time",

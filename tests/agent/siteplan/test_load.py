@@ -267,6 +267,14 @@ def test_sources_keep_what_was_entered(ostmere: SitePlan) -> None:
     assert opcua.address == "opc.tcp://127.0.0.1:4840/ostmere"
 
 
+def test_sparkplug_source_is_a_group_on_a_broker(tmp_path: Path) -> None:
+    opcua = "    kind: opcua\n    address: opc.tcp://127.0.0.1:4840/plant\n"
+    sparkplug = "    kind: mqtt_sparkplug\n    address: mqtt://127.0.0.1:1883\n    group: ostmere\n"
+    source = load_site(changed(tmp_path, (opcua, sparkplug), ("ns=2;s=", "gw/K-1/"))).sources["control"]
+    assert (source.kind, source.group, source.topics) == (SourceKind.MQTT_SPARKPLUG, "ostmere", ())
+    assert (source.mqtt_version, source.client_id) == (MqttVersion.V5, "throwline-small-works-control")
+
+
 def test_reading_the_demo_site_loads_neither_pint_nor_the_gas_library() -> None:
     """Both are slow to import, and the plant and the pages read the file too."""
     code = (
