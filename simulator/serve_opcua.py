@@ -1,9 +1,9 @@
-"""The control system: a read-only OPC UA server on loopback, one variable per tag."""
+"""The control system: a read-only OPC UA server on loopback, one variable per tag, with the past hour."""
 
 import asyncio
 from collections.abc import Sequence
 from datetime import UTC
-from types import TracebackType
+from types import MappingProxyType, TracebackType
 from typing import Final, Self
 from urllib.parse import urlsplit
 
@@ -11,10 +11,12 @@ from asyncua import Server, ua
 from asyncua.common.node import Node
 
 from agent.siteplan.plan import Input, UnitPlan
+from simulator.opcua_history import HourOfHistory
 from simulator.plant import Sample
 
 NAMESPACE: Final = "urn:ostmere:plant"
 LOOPBACK: Final = frozenset({"127.0.0.1", "localhost", "::1"})
+UNECE: Final = "http://www.opcfoundation.org/UA/units/un/cefact"
 _CLOSE_S: Final = 0.15  # the sockets close at once; what remains is a clock task that sleeps for a second
 
 
@@ -30,6 +32,7 @@ class OpcuaWire:
         self._address = address
         self._units = [(u.id, [i for i in u.inputs if i.source == source]) for u in units]
         self._nodes: dict[str, ua.NodeId] = {}
+        self._history = HourOfHistory()
         self._server: Server | None = None
 
     async def __aenter__(self) -> Self:
@@ -41,6 +44,7 @@ class OpcuaWire:
         server.set_security_policy([ua.SecurityPolicyType.NoSecurity])
         server.set_identity_tokens([ua.AnonymousIdentityToken])
         server.iserver.allow_remote_admin = False
+        server.iserver.history_manager.set_storage(self._history)
         index = await server.register_namespace(NAMESPACE)
         await self._populate(server, index)
         await server.start()
@@ -63,7 +67,9 @@ class OpcuaWire:
         if self._server is None:
             raise RuntimeError("the server is opened before it is written to")
         for sample in samples:
-            await self._server.write_attribute_value(self._nodes[sample.tag.address], _data_value(sample))
+            node, value = self._nodes[sample.tag.address], _data_value(sample)
+            await self._server.write_attribute_value(node, value)
+            self._history.put(node, sample.time, value)
 
     async def _populate(self, server: Server, index: int) -> None:
         site = await server.nodes.objects.add_object(
@@ -88,11 +94,52 @@ class OpcuaWire:
         node = await machine.add_variable(node_id, ua.QualifiedName(tag.tag, index), _EMPTY[kind], kind)
         await server_side_write(node, waiting)
         if kind in (ua.VariantType.Float, ua.VariantType.Double):
+            await _make_analog(node)
             low, high = ((v - tag.offset) / tag.scale for v in (tag.span_low, tag.span_high))
             await node.add_property(0, "EURange", ua.Range(Low=low, High=high))
-            unit = ua.EUInformation(NamespaceUri=NAMESPACE, UnitId=-1, DisplayName=ua.LocalizedText(tag.unit))
-            await node.add_property(0, "EngineeringUnits", unit)
+            await node.add_property(0, "EngineeringUnits", engineering_units(tag.unit))
+        await node.write_attribute(ua.AttributeIds.Historizing, ua.DataValue(ua.Variant(True)))
+        await node.set_attr_bit(ua.AttributeIds.AccessLevel, ua.AccessLevel.HistoryRead)
+        await node.set_attr_bit(ua.AttributeIds.UserAccessLevel, ua.AccessLevel.HistoryRead)
+        self._history.add(node_id, kind)
         self._nodes[tag.address] = node_id
+
+
+async def _make_analog(node: Node) -> None:
+    """The type of a variable that has a range and a unit."""
+    await node.delete_reference(ua.ObjectIds.BaseDataVariableType, ua.ObjectIds.HasTypeDefinition)
+    await node.add_reference(
+        ua.NodeId(ua.Int32(ua.ObjectIds.AnalogItemType)), ua.ObjectIds.HasTypeDefinition, bidirectional=False
+    )
+
+
+# Codes of UNECE Recommendation 20. It has none for gauge pressure: the unit is the bar, its name says gauge.
+_CODES: Final = MappingProxyType(
+    {
+        "barg": ("BAR", "bar, gauge"),
+        "bara": ("BAR", "bar, absolute"),
+        "degC": ("CEL", "degree Celsius"),
+        "K": ("KEL", "kelvin"),
+        "rpm": ("RPM", "revolutions per minute"),
+        "kW": ("KWT", "kilowatt"),
+    }
+)
+
+
+def unit_id(code: str) -> int:
+    """The number OPC UA makes of a UNECE code: its characters as bytes, the first one highest."""
+    return int.from_bytes(code.encode("ascii"), "big")
+
+
+def engineering_units(unit: str) -> ua.EUInformation:
+    """A unit by its UNECE code; by its name alone where we know no code."""
+    code, words = _CODES.get(unit, ("", unit))
+    return ua.EUInformation(
+        NamespaceUri=UNECE,
+        UnitId=ua.Int32(unit_id(code) if code else -1),
+        DisplayName=ua.LocalizedText(unit),
+        Description=ua.LocalizedText(words),
+    )
 
 
 async def server_side_write(node: Node, value: ua.DataValue) -> None:
@@ -123,9 +170,13 @@ def _variant_type(tag: Input) -> ua.VariantType:
 
 def _data_value(sample: Sample) -> ua.DataValue:
     when = ua.DateTime.fromtimestamp(sample.time, UTC)
+    kind = _variant_type(sample.tag)
+    failed = sample.value is None
     return ua.DataValue(
-        ua.Variant(sample.value, _variant_type(sample.tag)),
-        StatusCode=ua.StatusCode(ua.UInt32(ua.StatusCodes.Good)),
+        ua.Variant(_EMPTY[kind] if failed else sample.value, kind),
+        StatusCode=ua.StatusCode(
+            ua.UInt32(ua.StatusCodes.BadSensorFailure if failed else ua.StatusCodes.Good)
+        ),
         SourceTimestamp=when,
         ServerTimestamp=when,
     )

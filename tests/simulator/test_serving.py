@@ -23,11 +23,12 @@ from paho.mqtt.enums import CallbackAPIVersion
 
 from agent.siteplan.load import load_site
 from agent.siteplan.plan import SitePlan
+from simulator.opcua_history import Ring
 from simulator.plant import Plant, Sample
 from simulator.plant_main import scenario_path
 from simulator.scenario import load_scenario
 from simulator.serve_mqtt import MqttWire, payload
-from simulator.serve_opcua import NAMESPACE, OpcuaWire
+from simulator.serve_opcua import NAMESPACE, OpcuaWire, unit_id
 from simulator.steady_table import MACHINES
 
 SITE = scenario_path("quiet").parents[1] / "sites" / "ostmere.yaml"
@@ -254,6 +255,77 @@ def test_nodes_say_unit_range_and_that_they_are_simulated(served: Served) -> Non
         assert await served.node("Ostmere.Simulated").read_value() is True
 
     served.run(check())
+
+
+@pytest.mark.parametrize(
+    ("code", "number"),
+    # source: OPC Foundation, UNECE_to_OPCUA.csv, for RPM and C16; the others by the same rule, by hand
+    [("RPM", 5394509), ("C16", 4403510), ("BAR", 4342098), ("CEL", 4408652), ("KWT", 4937556), ("P1", 20529)],
+)
+def test_a_unit_code_is_a_number_by_the_published_rule(code: str, number: int) -> None:
+    assert unit_id(code) == number
+
+
+def test_units_are_told_by_code_and_by_name(served: Served) -> None:
+    async def check() -> None:
+        seen = {}
+        for name in ("PT-2201", "TT-2201", "JT-2201", "FT-2201"):
+            node = served.node(f"K-220.{name}")
+            assert await node.read_type_definition() == ua.NodeId(ua.ObjectIds.AnalogItemType)
+            unit = await (await node.get_child("0:EngineeringUnits")).read_value()
+            assert unit.NamespaceUri == "http://www.opcfoundation.org/UA/units/un/cefact"
+            seen[name] = (unit.UnitId, unit.DisplayName.Text)
+        assert seen == {
+            "PT-2201": (4342098, "barg"),
+            "TT-2201": (4408652, "degC"),
+            "JT-2201": (4937556, "kW"),
+            "FT-2201": (-1, "Nm3/h"),  # unknown: no code for this one
+        }
+        assert await served.node("K-220.UY-2201").read_type_definition() == ua.NodeId(
+            ua.ObjectIds.BaseDataVariableType
+        )
+
+    served.run(check())
+
+
+def test_history_is_what_was_written_with_times_and_status(served: Served) -> None:
+    async def check() -> None:
+        [pressure] = [s for s in served.sent if s.tag.tag == "PT-2203"]
+        [word] = [s for s in served.sent if s.tag.tag == "UY-2201"]
+        start = NOW + 100
+        for n in range(10):
+            value = None if n == 4 else 30.5 + n
+            await served.wire.write([Sample(tag=pressure.tag, time=start + n, value=value)])
+            await served.wire.write([Sample(tag=word.tag, time=start + n, value="100" if n < 5 else "50")])
+        node = served.node("K-220.PT-2203")
+
+        async def history(of: Node, first: float, last: float, count: int = 0) -> list[Any]:
+            times = (datetime.fromtimestamp(first, UTC), datetime.fromtimestamp(last, UTC))
+            found = await of.read_raw_history(*times, count)
+            return [(v.SourceTimestamp.timestamp(), v.Value.Value) for v in found if v.StatusCode.is_good()]
+
+        assert await history(node, start + 2, start + 6) == [(start + n, 30.5 + n) for n in (2, 3, 5, 6)]
+        assert await history(node, start + 6, start + 2) == [(start + n, 30.5 + n) for n in (6, 5, 3, 2)]
+        assert await history(node, start + 2, start + 6, 2) == [(start + 2, 32.5), (start + 3, 33.5)]
+        words = await history(served.node("K-220.UY-2201"), start + 4, start + 5)
+        assert words == [(start + 4, "100"), (start + 5, "50")]
+        newest = await node.read_raw_history(None, datetime.fromtimestamp(start + 5, UTC), 2)
+        assert [v.SourceTimestamp.timestamp() for v in newest] == [start + 5, start + 4]
+        assert newest[1].StatusCode.value == ua.StatusCodes.BadSensorFailure
+        assert (await node.read_attribute(ua.AttributeIds.Historizing)).Value.Value is True
+        assert ua.AccessLevel.HistoryRead in await node.get_access_level()
+        assert ua.AccessLevel.CurrentWrite not in await node.get_user_access_level()
+
+    served.run(check())
+
+
+def test_history_keeps_an_hour_and_no_more() -> None:
+    ring = Ring(ua.VariantType.Float, 60)
+    for n in range(1000):
+        ring.put(NOW + n, float(n), 0)
+    found = list(ring.between(0.0, 1e12, newest_first=False))
+    assert [t for t, _ in found] == [NOW + n for n in range(940, 1000)]
+    assert [v.Value.Value for _, v in found] == [float(n) for n in range(940, 1000)]
 
 
 def test_client_can_neither_write_a_value_nor_add_a_node(served: Served) -> None:
