@@ -25,6 +25,10 @@ def _missing(marker: str) -> str | None:
         return "Mosquitto is not on this machine"
     if marker == "browser" and shutil.which("chromium", path=_wide_path()) is None:
         return "Chromium is not on this machine"
+    if marker == "peers" and shutil.which("node") is None:
+        return "Node.js is not on this machine"
+    if marker == "peers" and not (ROOT / "tests" / "peers" / "node_modules").is_dir():
+        return "the peers are not installed: npm ci --prefix tests/peers"
     return None
 
 
@@ -38,7 +42,7 @@ def pytest_collection_modifyitems(config: pytest.Config, items: list[pytest.Item
     forbidden = os.environ.get("THROWLINE_FORBID_SKIP") == "1"
     run_slow = forbidden or "slow" in config.getoption("-m", default="")
     for item in items:
-        for marker in ("mosquitto", "browser"):
+        for marker in ("mosquitto", "browser", "peers"):
             reason = _missing(marker) if item.get_closest_marker(marker) else None
             if reason and forbidden:
                 raise pytest.UsageError(f"{item.nodeid}: {reason}, and skipping is forbidden here")

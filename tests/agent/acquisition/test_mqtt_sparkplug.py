@@ -105,14 +105,31 @@ def test_what_the_edge_node_sends_is_read(
     asyncio.run(scenario())
 
 
+@pytest.mark.mosquitto
+def test_the_edge_node_sends_at_most_once_and_dies_at_least_once(
+    mosquitto: Any, tags: tuple[Input, ...], until: Any
+) -> None:
+    """Seen by a subscriber that would take either."""
+    port = mosquitto(MqttVersion.V311).port
+    voice = Voice(port)
+    with gateway(port, tags) as wire:
+        wire.publish(instant(tags, 20.0, "100", True, 1.0))
+        wire.publish(instant(tags, 21.0, "100", True, 1.0))
+    seen = [voice.heard.get(timeout=20) for _ in range(4)]
+    voice.close()
+    assert [(t.split("/")[2], qos) for t, qos in seen] == [
+        ("NBIRTH", 0), ("DBIRTH", 0), ("DDATA", 0), ("NDEATH", 1)
+    ]  # fmt: skip
+
+
 class Voice:
     """A client that says what no edge node should, and hears everything on the broker."""
 
     def __init__(self, port: int) -> None:
-        self.heard: queue.SimpleQueue[str] = queue.SimpleQueue()
+        self.heard: queue.SimpleQueue[tuple[str, int]] = queue.SimpleQueue()
         subscribed: queue.SimpleQueue[bool] = queue.SimpleQueue()
         self._client = Client(CallbackAPIVersion.VERSION2, client_id="voice")
-        self._client.on_message = lambda _c, _u, message: self.heard.put(message.topic)
+        self._client.on_message = lambda _c, _u, message: self.heard.put((message.topic, message.qos))
         self._client.on_subscribe = lambda *_: subscribed.put(True)
         self._client.connect("127.0.0.1", port)
         self._client.loop_start()
@@ -180,7 +197,7 @@ def test_a_gap_is_bad_until_the_next_birth_and_the_agent_says_nothing(
 
     asyncio.run(scenario())
     said = [voice.heard.get(timeout=20) for _ in range(8)]
-    assert {t.split("/")[2] for t in said} == {"NBIRTH", "DBIRTH", "DDATA", "nonsense"}
+    assert {t.split("/")[2] for t, _ in said} == {"NBIRTH", "DBIRTH", "DDATA", "nonsense"}
     assert voice.heard.empty()
 
 
