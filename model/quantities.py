@@ -72,13 +72,21 @@ def _margin(of: Quantity, words: str) -> Quantity:
 
 _U, _S, _C = Scope.UNIT, Scope.STAGE, Scope.CYLINDER
 
-_DISCHARGE_TEMPERATURE = _measured("discharge_temperature", "discharge temperature", _S, "temperature", "K", "degC", 1)
+_DISCHARGE_TEMPERATURE = _measured(
+    "discharge_temperature", "discharge temperature", _S, "temperature", "K", "degC", 1
+)
 _GAS_TENSION = _estimate("gas_load_tension", "gas load, tension", _C, "force", "N", "kN", 1)
 _GAS_COMPRESSION = _estimate("gas_load_compression", "gas load, compression", _C, "force", "N", "kN", 1)
 _PIN_TENSION = _estimate("pin_load_tension", "combined load at the pin, tension", _C, "force", "N", "kN", 1)
-_PIN_COMPRESSION = _estimate("pin_load_compression", "combined load at the pin, compression", _C, "force", "N", "kN", 1)
-_REVERSAL_DEGREES = _estimate("reversal_degrees", "load reversal at the pin, duration", _C, "angle", "rad", "deg", 0)
-_REVERSAL_PERCENT = _estimate("reversal_percent", "load reversal at the pin, magnitude", _C, "fraction", "1", "%", 1)
+_PIN_COMPRESSION = _estimate(
+    "pin_load_compression", "combined load at the pin, compression", _C, "force", "N", "kN", 1
+)
+_REVERSAL_DEGREES = _estimate(
+    "reversal_degrees", "load reversal at the pin, duration", _C, "angle", "rad", "deg", 0
+)
+_REVERSAL_PERCENT = _estimate(
+    "reversal_percent", "load reversal at the pin, magnitude", _C, "fraction", "1", "%", 1
+)
 
 _TABLE: Final = (
     # measured
@@ -93,21 +101,46 @@ _TABLE: Final = (
     _measured("run_signal", "run signal", _U, "index", "1", "1", 0),
     # stage estimates
     _estimate("stage_ratio", "stage ratio", _S, "ratio", "1", "1", 3),
-    _estimate("isentropic_discharge_temperature", "isentropic discharge temperature", _S, "temperature", "K", "degC", 1),
-    _estimate("expected_discharge_temperature", "expected discharge temperature", _S, "temperature", "K", "degC", 1),
     _estimate(
-        "discharge_temperature_residual", "discharge temperature, measured less expected", _S,
-        "temperature_difference", "K", "K", 1,
+        "isentropic_discharge_temperature",
+        "isentropic discharge temperature",
+        _S,
+        "temperature",
+        "K",
+        "degC",
+        1,
+    ),
+    _estimate(
+        "expected_discharge_temperature", "expected discharge temperature", _S, "temperature", "K", "degC", 1
+    ),
+    _estimate(
+        "discharge_temperature_residual",
+        "discharge temperature, measured less expected",
+        _S,
+        "temperature_difference",
+        "K",
+        "K",
+        1,
     ),
     _estimate("volumetric_efficiency", "expected volumetric efficiency", _S, "fraction", "1", "%", 1),
-    _estimate("measured_volumetric_efficiency", "volumetric efficiency from measured flow", _S, "fraction", "1", "%", 1),
+    _estimate(
+        "measured_volumetric_efficiency",
+        "volumetric efficiency from measured flow",
+        _S,
+        "fraction",
+        "1",
+        "%",
+        1,
+    ),
     _estimate("stage_capacity", "expected capacity", _S, "molar_flow", "mol/s", "Nm3/h", 0),
     _estimate("stage_power", "expected indicated power", _S, "power", "W", "kW", 0),
     # unit estimates
     _estimate("capacity", "expected capacity", _U, "molar_flow", "mol/s", "Nm3/h", 0),
     _estimate("mass_flow", "expected mass flow", _U, "mass_flow", "kg/s", "kg/s", 3),
     _estimate("power", "expected indicated power", _U, "power", "W", "kW", 0),
-    _estimate("capacity_residual", "measured flow less expected, share of expected", _U, "fraction", "1", "%", 1),
+    _estimate(
+        "capacity_residual", "measured flow less expected, share of expected", _U, "fraction", "1", "%", 1
+    ),
     # cylinder estimates
     _GAS_TENSION,
     _GAS_COMPRESSION,
@@ -117,8 +150,14 @@ _TABLE: Final = (
     _REVERSAL_PERCENT,
     # state
     Quantity(
-        key="run_state", words="running state", scope=_U, kind=Kind.ESTIMATE, dimension="index", unit="1",
-        display_unit="1", decimals=0,
+        key="run_state",
+        words="running state",
+        scope=_U,
+        kind=Kind.ESTIMATE,
+        dimension="index",
+        unit="1",
+        display_unit="1",
+        decimals=0,
     ),
     # margins: what is left
     _margin(_DISCHARGE_TEMPERATURE, "discharge temperature, left to the limit"),
