@@ -119,8 +119,8 @@ class RunState(IntEnum):
 class Frame:
     """All inputs of one unit at one tick, in SI and absolute, in the order of the unit's input list.
 
-    ``values`` (n,) float32 with NaN where unusable; ``quality`` (n,) uint8; ``ages`` (n,) float32, seconds from
-    source time to tick, NaN where nothing was ever received. A load step is its index in the truth table.
+    ``values`` (n,) float32 with NaN where unusable; ``quality`` (n,) uint8; ``ages`` (n,) float32, seconds
+    from source time to tick, NaN where nothing was ever received. A load step is its index in the truth table.
     """
 
     unit: str
@@ -132,7 +132,7 @@ class Frame:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class DerivedRow:
-    """All results of one unit at one tick, in the order of its result list (SI, float32, NaN where there is none)."""
+    """All results of one unit at one tick, in the order of its result list (SI, NaN where there is none)."""
 
     unit: str
     tick: int

@@ -44,14 +44,16 @@ class Quantity:
     has_uncertainty: bool = False
 
 
-def _measured(key: str, words: str, scope: Scope, dimension: str, unit: str, show: str, dec: int) -> Quantity:
+def _measured(  # noqa: PLR0917 - columns of a table
+    key: str, words: str, scope: Scope, dimension: str, unit: str, show: str, dec: int
+) -> Quantity:
     return Quantity(
         key=key, words=words, scope=scope, kind=Kind.MEASURED, dimension=dimension, unit=unit,
         display_unit=show, decimals=dec,
     )  # fmt: skip
 
 
-def _estimate(
+def _estimate(  # noqa: PLR0917 - columns of a table
     key: str, words: str, scope: Scope, dimension: str, unit: str, show: str, dec: int, *, u: bool = True
 ) -> Quantity:
     return Quantity(
@@ -61,7 +63,7 @@ def _estimate(
 
 
 def _margin(of: Quantity, words: str) -> Quantity:
-    """What is left of ``of``: a difference, so a temperature margin is in kelvin, never in degrees Celsius."""
+    """What is left of ``of``: a difference, so a temperature margin is in kelvin, never in degrees."""
     dimension = {"temperature": "temperature_difference"}.get(of.dimension, of.dimension)
     show = {"temperature": "K"}.get(of.dimension, of.display_unit)
     return Quantity(
