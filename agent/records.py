@@ -120,7 +120,7 @@ class Frame:
     """All inputs of one unit at one tick, in SI and absolute, in the order of the unit's input list.
 
     ``values`` (n,) float32 with NaN where unusable; ``quality`` (n,) uint8; ``ages`` (n,) float32, seconds
-    from source time to tick, NaN where nothing was ever received. A load step is its index in the truth table.
+    from source time to tick, NaN where none was ever received. A load step is its place in the truth table.
     """
 
     unit: str
