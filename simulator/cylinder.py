@@ -18,7 +18,7 @@ from simulator.eos import CHOKED_SQUARED, CRITICAL_RATIO, MOLAR_MASS, gas_state
 from simulator.gas_data import GAS_CONSTANT, Floats
 from simulator.valves import held_back, molar_flow, plate_step
 
-Integers = npt.NDArray[np.int64]
+Records = npt.NDArray[np.void]
 
 HEAD: Final = 1.0
 CRANK: Final = -1.0
@@ -58,88 +58,73 @@ _LEAST_MOL: Final = 1e-9
 _RETURN: Final = 0.2  # share of a pressure difference that a passage makes good in a step
 
 
-class Ends(NamedTuple):
-    """Constants of all ends of a unit, one value an end."""
-
-    stage: Integers  # row of the gas and number of the stage, from 0
-    offset: Integers  # steps by which its throw is ahead of the first
-    partner: Integers  # the other end of the same cylinder, or -1
-    side: Floats  # HEAD or CRANK
-    area: Floats  # piston, m2
-    clearance: Floats  # m3
-    suction_area: Floats  # effective, at full lift, m2
-    discharge_area: Floats
-    suction_leak: Floats  # effective, always open, m2
-    discharge_leak: Floats
-    ring_leak: Floats  # entered at the head end only
-    packing_leak: Floats
-    held_open: Floats  # least lift of the suction valves, 0 to 1
-    frequency: Floats  # rad/s
-    suction_preload: Floats  # Pa
-    suction_full: Floats
-    discharge_preload: Floats
-    discharge_full: Floats
-    film: Floats  # film coefficient / density^0.8
-    wall_base: Floats  # head and piston faces, m2
-    wall_per_volume: Floats  # liner, 1/m
-    wall_temperature: Floats
-    passage_volume: Floats
-    nozzle_area: Floats
-    evaporation: Floats  # heat taken by carried-over liquid, J per mole drawn in
-
-
-class EndState(NamedTuple):
-    """What moves, one value an end."""
-
-    amount: Floats  # mol
-    temperature: Floats
-    passage_amount: Floats
-    passage_temperature: Floats
-    suction_lift: Floats
-    suction_speed: Floats
-    discharge_lift: Floats
-    discharge_speed: Floats
+# One record an end, so that a compiled function gets one array and not twenty: counting references to each
+# of them took longer than the physics. First the constants, then what moves.
+END: Final = np.dtype(
+    [
+        ("stage", np.int64),  # row of the gas and number of the stage, from 0
+        ("offset", np.int64),  # steps by which its throw is ahead of the first
+        ("partner", np.int64),  # the other end of the same cylinder, or -1
+        ("side", np.float64),  # HEAD or CRANK
+        ("area", np.float64),  # piston, m2
+        ("clearance", np.float64),  # m3
+        ("suction_area", np.float64),  # effective, at full lift, m2
+        ("discharge_area", np.float64),
+        ("suction_leak", np.float64),  # effective, always open, m2
+        ("discharge_leak", np.float64),
+        ("ring_leak", np.float64),  # entered at the head end only
+        ("packing_leak", np.float64),
+        ("held_open", np.float64),  # least lift of the suction valves, 0 to 1
+        ("frequency", np.float64),  # rad/s
+        ("suction_preload", np.float64),  # Pa
+        ("suction_full", np.float64),
+        ("discharge_preload", np.float64),
+        ("discharge_full", np.float64),
+        ("film", np.float64),  # film coefficient / density^0.8
+        ("wall_base", np.float64),  # head and piston faces, m2
+        ("wall_per_volume", np.float64),  # liner, 1/m
+        ("wall_temperature", np.float64),
+        ("passage_volume", np.float64),
+        ("nozzle_area", np.float64),
+        ("evaporation", np.float64),  # heat taken by carried-over liquid, J per mole drawn in
+    ]
+)
+MOVING: Final = np.dtype(
+    [
+        ("amount", np.float64),  # mol
+        ("temperature", np.float64),
+        ("passage_amount", np.float64),
+        ("passage_temperature", np.float64),
+        ("suction_lift", np.float64),
+        ("suction_speed", np.float64),
+        ("discharge_lift", np.float64),
+        ("discharge_speed", np.float64),
+        ("pushed_back", np.float64),  # mol given back to the bottle and not yet drawn in again
+    ]
+)
 
 
 class Crank(NamedTuple):
-    """Motion at equal angles: piston position and its slope with angle."""
+    """Volume of each end, and its slope with angle, at every step of a turn and one more."""
 
-    position: Floats
+    volume: Floats  # (ends, steps + 1)
     per_radian: Floats
-    stroke: float
 
 
 @compiled
-def end_volume(e: int, at: int, ends: Ends, crank: Crank) -> tuple[float, float]:
-    """Volume [m3] and its slope with angle [m3/rad] of an end at one crank step."""
-    k = (at + ends.offset[e]) % crank.position.size
-    x, slope = crank.position[k], crank.per_radian[k]
-    if ends.side[e] < 0.0:
-        x, slope = crank.stroke - x, -crank.per_radian[k]
-    return ends.clearance[e] + ends.area[e] * x, ends.area[e] * slope
-
-
-@compiled
-def end_states(
-    at: int,
-    ends: Ends,
-    crank: Crank,
-    gas: Floats,
-    amounts: tuple[Floats, Floats, Floats, Floats],
-    out: Floats,
-) -> None:
+def end_states(at: int, ends: Records, crank: Crank, gas: Floats, moving: Records, out: Floats) -> None:
     """Fill ``out`` with the states of every cylinder end and passage."""
-    n, t, passage_n, passage_t = amounts
-    for e in range(n.size):
-        row = gas[ends.stage[e]]
-        volume, _ = end_volume(e, at, ends, crank)
-        p, slope, h, cv = gas_state(t[e], volume / n[e], row)
+    for e in range(ends.size):
+        row = gas[ends[e]["stage"]]
+        now = moving[e]
+        n, volume = now["amount"], crank.volume[e, at]
+        p, slope, h, cv = gas_state(now["temperature"], volume / n, row)
         out[e, PRESSURE], out[e, SLOPE], out[e, ENTHALPY], out[e, HEAT_CAPACITY] = p, slope, h, cv
-        out[e, CONCENTRATION] = n[e] / volume
-        volume = ends.passage_volume[e]
-        p, slope, h, cv = gas_state(passage_t[e], volume / passage_n[e], row)
+        out[e, CONCENTRATION] = n / volume
+        n, volume = now["passage_amount"], ends[e]["passage_volume"]
+        p, slope, h, cv = gas_state(now["passage_temperature"], volume / n, row)
         out[e, 5], out[e, 6], out[e, 7], out[e, 8] = p, slope, h, cv
-        out[e, 9] = passage_n[e] / volume
+        out[e, 9] = n / volume
 
 
 @compiled
@@ -162,120 +147,129 @@ def exchange(
 
 @compiled
 def refill(
-    amount: float, drawn: float, drawn_heat: float, passage: Floats, bottle: Floats, step: float
+    amount: float, spill: float, drawing: tuple[float, float], passage: Floats, bottle: Floats, step: float
 ) -> tuple[float, float]:
     """Flow from the bottle into a passage [mol/s], and its enthalpy [W].
 
     The passage keeps the bottle's pressure: what is drawn is replaced, less what the gas in it swells by
     as it mixes; the last term brings what is left of a difference back within a few steps. The loss of the
     nozzle is reckoned with the valve's: a pressure of its own here would need far shorter steps.
+
+    Gas pushed back through the nozzle is at first the cold gas that came in last; only when as much as the
+    passage holds was pushed back does what leaves have its mean temperature (``spill`` 0 to 1).
     """
+    drawn, drawn_heat = drawing
     pressure = passage[PRESSURE]
-    mixing = drawn * bottle[ENTHALPY] - drawn_heat if drawn > 0.0 else drawn * passage[ENTHALPY] - drawn_heat
+    replaced = bottle[ENTHALPY] if drawn > 0.0 else passage[ENTHALPY]
+    mixing = drawn * replaced - drawn_heat
     swelling = mixing * passage[SLOPE] / (pressure * (passage[HEAT_CAPACITY] + GAS_CONSTANT))
     flow = drawn - swelling + _RETURN * amount * (bottle[PRESSURE] / pressure - 1.0) / step
-    return flow, flow * (bottle[ENTHALPY] if flow > 0.0 else passage[ENTHALPY])
+    warmer = spill * (passage[ENTHALPY] - bottle[ENTHALPY]) if flow < 0.0 else 0.0
+    return flow, flow * (bottle[ENTHALPY] + warmer)
 
 
 @compiled
-def leak_rates(ends: Ends, gas: Floats, vent_pa: float, step: float, state: Floats, out: Floats) -> None:
+def leak_rates(ends: Records, gas: Floats, vent_pa: float, step: float, state: Floats, out: Floats) -> None:
     """Flow past the rings of each cylinder and out of each packing."""
-    for e in range(ends.area.size):
+    for e in range(ends.size):
         out[e, PACKING] = out[e, PACKING + 1] = 0.0
-        other = ends.partner[e]
-        if ends.side[e] > 0.0 or other < 0:
+        if ends[e]["side"] > 0.0 or ends[e]["partner"] < 0:
             out[e, RING] = out[e, RING + 1] = 0.0
-    for e in range(ends.area.size):
-        row = gas[ends.stage[e]]
-        other = ends.partner[e]
-        if ends.side[e] > 0.0 and other >= 0:
-            flow, heat, _ = exchange(ends.ring_leak[e], state[e], state[other], 0.0, row, step)
+    for e in range(ends.size):
+        end = ends[e]
+        row, other = gas[end["stage"]], end["partner"]
+        if end["side"] > 0.0 and other >= 0:
+            flow, heat, _ = exchange(end["ring_leak"], state[e], state[other], 0.0, row, step)
             out[e, RING], out[e, RING + 1] = flow, heat
             out[other, RING], out[other, RING + 1] = -flow, -heat
         p = state[e, PRESSURE]
-        if ends.packing_leak[e] > 0.0 and p > vent_pa:
+        if end["packing_leak"] > 0.0 and p > vent_pa:
             c = state[e, CONCENTRATION]
             m, critical, choked = row[MOLAR_MASS], row[CRITICAL_RATIO], row[CHOKED_SQUARED]
-            flow = molar_flow(ends.packing_leak[e], p, vent_pa, c, m, critical, choked)
+            flow = molar_flow(end["packing_leak"], p, vent_pa, c, m, critical, choked)
             out[e, PACKING], out[e, PACKING + 1] = flow, flow * state[e, ENTHALPY]
 
 
 @compiled
 def end_rates(
     at: int,
-    ends: Ends,
+    ends: Records,
     crank: Crank,
     gas: Floats,
     bottles: Floats,
-    amounts: tuple[Floats, Floats, Floats, Floats],
-    lifts: tuple[Floats, Floats],
+    moving: Records,
     drive: tuple[float, float],
     state: Floats,
     out: Floats,
 ) -> None:
     """Rates of change of every end and passage; leaks past rings and packing stand in ``out`` already."""
-    n, t, passage_n, passage_t = amounts
     speed, step = drive
-    for e in range(n.size):
-        k = ends.stage[e]
-        row, here = gas[k], state[e]
-        passage = state[e, PASSAGE:]
-        area = ends.suction_leak[e] + ends.suction_area[e] * max(lifts[0][e], ends.held_open[e])
-        nozzle = ends.nozzle_area[e]
+    for e in range(ends.size):
+        end, now, here = ends[e], moving[e], state[e]
+        k = end["stage"]
+        row, passage = gas[k], state[e, PASSAGE:]
+        n, t, passage_n, passage_t = (
+            now["amount"],
+            now["temperature"],
+            now["passage_amount"],
+            now["passage_temperature"],
+        )
+        area = end["suction_leak"] + end["suction_area"] * max(now["suction_lift"], end["held_open"])
+        nozzle = end["nozzle_area"]
         area *= nozzle / math.sqrt(area * area + nozzle * nozzle)  # two losses in series
-        fs, hs, held_s = exchange(area, passage, here, 1.0 / n[e], row, step)
-        area = ends.discharge_leak[e] + ends.discharge_area[e] * lifts[1][e]
-        fd, hd, held_d = exchange(area, here, bottles[2 * k + 1], 1.0 / n[e], row, step)
-        fn, hn = refill(passage_n[e], fs, hs, passage, bottles[2 * k], step)
+        fs, hs, held_s = exchange(area, passage, here, 1.0 / n, row, step)
+        area = end["discharge_leak"] + end["discharge_area"] * now["discharge_lift"]
+        fd, hd, held_d = exchange(area, here, bottles[2 * k + 1], 1.0 / n, row, step)
+        spill = min(1.0, now["pushed_back"] / passage_n)
+        fn, hn = refill(passage_n, spill, (fs, hs), passage, bottles[2 * k], step)
         # passage
         net = fn - fs
-        swell = passage_t[e] * passage[SLOPE] / passage[CONCENTRATION]
+        swell = passage_t * passage[SLOPE] / passage[CONCENTRATION]
         gain = hn - hs - net * passage[ENTHALPY] + swell * net
         out[e, PASSAGE_AMOUNT] = net
-        out[e, PASSAGE_TEMPERATURE] = gain / (passage_n[e] * passage[HEAT_CAPACITY])
+        out[e, PASSAGE_TEMPERATURE] = gain / (passage_n * passage[HEAT_CAPACITY])
         # cylinder
         if fs > 0.0:
-            hs -= fs * ends.evaporation[e]
-        volume, per_radian = end_volume(e, at, ends, crank)
-        film = out[e, WALL_FILM] * (ends.wall_base[e] + volume * ends.wall_per_volume[e])
-        heat = film * (ends.wall_temperature[e] - t[e])
-        h = here[ENTHALPY]
-        away = fd + out[e, RING] + out[e, PACKING]
-        net = fs - away
-        swell = t[e] * here[SLOPE] / here[CONCENTRATION]
-        gain = heat - t[e] * here[SLOPE] * per_radian * speed + swell * net
-        gain += hs - hd - out[e, RING + 1] - out[e, PACKING + 1] - net * h
+            hs -= fs * end["evaporation"]
+        film = out[e, WALL_FILM] * (end["wall_base"] + crank.volume[e, at] * end["wall_per_volume"])
+        heat = film * (end["wall_temperature"] - t)
+        net = fs - fd - out[e, RING] - out[e, PACKING]
+        swell = t * here[SLOPE] / here[CONCENTRATION]
+        gain = heat - t * here[SLOPE] * crank.per_radian[e, at] * speed + swell * net
+        gain += hs - hd - out[e, RING + 1] - out[e, PACKING + 1] - net * here[ENTHALPY]
         out[e, AMOUNT] = net
-        out[e, TEMPERATURE] = gain / (n[e] * here[HEAT_CAPACITY])
+        out[e, TEMPERATURE] = gain / (n * here[HEAT_CAPACITY])
         out[e, SUCTION], out[e, SUCTION + 1] = fs, hs
         out[e, DISCHARGE], out[e, DISCHARGE + 1] = fd, hd
         out[e, NOZZLE], out[e, NOZZLE + 1] = fn, hn
         out[e, WALL_HEAT] = heat
-        out[e, WALL_AREA], out[e, WALL_AREA_HEAT] = film, film * t[e]
+        out[e, WALL_AREA], out[e, WALL_AREA_HEAT] = film, film * t
         out[e, HELD_BACK] = held_s + held_d
 
 
 @compiled
-def wall_films(ends: Ends, gas: Floats, state: Floats, out: Floats) -> None:
+def wall_films(ends: Records, gas: Floats, state: Floats, out: Floats) -> None:
     """Film coefficient of every end for one step, before the area."""
-    for e in range(ends.area.size):
-        density = state[e, CONCENTRATION] * gas[ends.stage[e], MOLAR_MASS]
-        out[e, WALL_FILM] = ends.film[e] * density**0.8
+    for e in range(ends.size):
+        density = state[e, CONCENTRATION] * gas[ends[e]["stage"], MOLAR_MASS]
+        out[e, WALL_FILM] = ends[e]["film"] * density**0.8
 
 
 @compiled
-def move_plates(ends: Ends, moving: EndState, bottles: Floats, state: Floats, step: float) -> None:
+def move_plates(ends: Records, moving: Records, bottles: Floats, state: Floats, step: float) -> None:
     """Move every valve plate on by one step under the pressures at its start."""
-    for e in range(ends.area.size):
-        p = state[e, PRESSURE]
-        moving.suction_lift[e], moving.suction_speed[e] = plate_step(
-            moving.suction_lift[e], moving.suction_speed[e], state[e, PASSAGE] - p,
-            ends.suction_preload[e], ends.suction_full[e], ends.frequency[e], step,
+    for e in range(ends.size):
+        end, now, p = ends[e], moving[e], state[e, PRESSURE]
+        lift, speed = plate_step(
+            now["suction_lift"], now["suction_speed"], state[e, PASSAGE] - p,
+            end["suction_preload"], end["suction_full"], end["frequency"], step,
         )  # fmt: skip
-        moving.discharge_lift[e], moving.discharge_speed[e] = plate_step(
-            moving.discharge_lift[e], moving.discharge_speed[e], p - bottles[2 * ends.stage[e] + 1, PRESSURE],
-            ends.discharge_preload[e], ends.discharge_full[e], ends.frequency[e], step,
+        now["suction_lift"], now["suction_speed"] = lift, speed
+        lift, speed = plate_step(
+            now["discharge_lift"], now["discharge_speed"], p - bottles[2 * end["stage"] + 1, PRESSURE],
+            end["discharge_preload"], end["discharge_full"], end["frequency"], step,
         )  # fmt: skip
+        now["discharge_lift"], now["discharge_speed"] = lift, speed
 
 
 @compiled

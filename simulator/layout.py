@@ -7,7 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from model.machine import Cylinder, End, Side, Unit
-from simulator.cylinder import CRANK, HEAD, Crank, Ends
+from simulator.cylinder import CRANK, END, HEAD, Crank, Records
 from simulator.eos import CHOKED_SQUARED, CRITICAL_RATIO, MOLAR_MASS, gas_row, gas_volume
 from simulator.equipment import Equipment, SealedDraw, StageEquipment, Surroundings
 from simulator.faults import FaultKind, Faults
@@ -47,9 +47,18 @@ def places(unit: Unit) -> tuple[Place, ...]:
     return tuple(found)
 
 
-def crank_of(unit: Unit, steps: int) -> Crank:
+def crank_of(unit: Unit, ends: Records, steps: int) -> Crank:
+    """Volumes of all ends over one turn."""
     moved = motion(unit.stroke_m, unit.connecting_rod_m, steps)
-    return Crank(position=moved.position_m, per_radian=moved.per_radian_m, stroke=unit.stroke_m)
+    volume, per_radian = np.empty((len(ends), steps + 1)), np.empty((len(ends), steps + 1))
+    for e, end in enumerate(ends):
+        at = (np.arange(steps + 1) + end["offset"]) % steps
+        x, slope = moved.position_m[at], moved.per_radian_m[at]
+        if end["side"] < 0.0:
+            x, slope = unit.stroke_m - x, -slope
+        volume[e] = end["clearance"] + end["area"] * x
+        per_radian[e] = end["area"] * slope
+    return Crank(volume=volume, per_radian=per_radian)
 
 
 def film_factor(cylinder: Cylinder, composition: Mapping[str, float], piston_speed_m_s: float) -> float:
@@ -108,7 +117,7 @@ def lay_out_ends(  # noqa: PLR0917 - one call only
     around: Surroundings,
     steps: int,
     wall_temperature: Floats,
-) -> Ends:
+) -> Records:
     """Constants of all ends under the present faults and surroundings."""
     where = places(unit)
     dry = around.composition or unit.composition
@@ -144,37 +153,41 @@ def lay_out_ends(  # noqa: PLR0917 - one call only
     phase = [round(equipment.phases_deg[p.throw] / 360.0 * steps) for p in where]
     suction_area = each(lambda p: p.end.suction_area_ratio * p.area_m2)
     film = draw.wall_heat
-    return Ends(
-        stage=np.array([p.stage for p in where]),
-        offset=np.array([(-shift) % steps for shift in phase]),
-        partner=np.array([number.get((p.cylinder.number, opposite[p.end.side]), -1) for p in where]),
-        side=each(lambda p: HEAD if p.end.side is Side.HEAD else CRANK),
-        area=each(lambda p: p.area_m2),
-        clearance=each(lambda p: _clearance(p, draw, around, faults) * p.area_m2 * stroke),
-        suction_area=suction_area * draw.valve_area,
-        discharge_area=each(lambda p: p.end.discharge_area_ratio * p.area_m2) * draw.valve_area,
-        suction_leak=leak(FaultKind.SUCTION_VALVE_LEAK),
-        discharge_leak=leak(FaultKind.DISCHARGE_VALVE_LEAK),
-        ring_leak=cylinder_leak(FaultKind.RING_LEAK, Side.HEAD),
-        packing_leak=cylinder_leak(FaultKind.PACKING_LEAK, Side.CRANK),
-        held_open=each(lambda p: _held_open(p, around, faults)),
-        frequency=each(lambda p: p.cylinder.valve_natural_frequency_hz)
+    values: dict[str, object] = {
+        "stage": np.array([p.stage for p in where]),
+        "offset": np.array([(-shift) % steps for shift in phase]),
+        "partner": np.array([number.get((p.cylinder.number, opposite[p.end.side]), -1) for p in where]),
+        "side": each(lambda p: HEAD if p.end.side is Side.HEAD else CRANK),
+        "area": each(lambda p: p.area_m2),
+        "clearance": each(lambda p: _clearance(p, draw, around, faults) * p.area_m2 * stroke),
+        "suction_area": suction_area * draw.valve_area,
+        "discharge_area": each(lambda p: p.end.discharge_area_ratio * p.area_m2) * draw.valve_area,
+        "suction_leak": leak(FaultKind.SUCTION_VALVE_LEAK),
+        "discharge_leak": leak(FaultKind.DISCHARGE_VALVE_LEAK),
+        "ring_leak": cylinder_leak(FaultKind.RING_LEAK, Side.HEAD),
+        "packing_leak": cylinder_leak(FaultKind.PACKING_LEAK, Side.CRANK),
+        "held_open": each(lambda p: _held_open(p, around, faults)),
+        "frequency": each(lambda p: p.cylinder.valve_natural_frequency_hz)
         * (2.0 * math.pi * draw.valve_frequency),
-        suction_preload=each(lambda p: preload(p) * of(p).design_suction_pa),
-        suction_full=each(lambda p: full_lift(p) * of(p).design_suction_pa),
-        discharge_preload=each(lambda p: preload(p) * of(p).design_discharge_pa),
-        discharge_full=each(lambda p: full_lift(p) * of(p).design_discharge_pa),
-        film=each(lambda p: film * film_factor(p.cylinder, dry, piston_speed)),
-        wall_base=each(lambda p: 2.0 * p.area_m2),
-        wall_per_volume=each(lambda p: math.pi * p.cylinder.bore_m / p.area_m2),
-        wall_temperature=wall_temperature,
-        passage_volume=each(lambda p: of(p).passage_volume * p.area_m2 * stroke) * draw.passage_volume,
-        nozzle_area=each(lambda p: of(p).nozzle_area) * suction_area,
-        evaporation=each(
+        "suction_preload": each(lambda p: preload(p) * of(p).design_suction_pa),
+        "suction_full": each(lambda p: full_lift(p) * of(p).design_suction_pa),
+        "discharge_preload": each(lambda p: preload(p) * of(p).design_discharge_pa),
+        "discharge_full": each(lambda p: full_lift(p) * of(p).design_discharge_pa),
+        "film": each(lambda p: film * film_factor(p.cylinder, dry, piston_speed)),
+        "wall_base": each(lambda p: 2.0 * p.area_m2),
+        "wall_per_volume": each(lambda p: math.pi * p.cylinder.bore_m / p.area_m2),
+        "wall_temperature": wall_temperature,
+        "passage_volume": each(lambda p: of(p).passage_volume * p.area_m2 * stroke) * draw.passage_volume,
+        "nozzle_area": each(lambda p: of(p).nozzle_area) * suction_area,
+        "evaporation": each(
             lambda p: (1.0 - _EVAPORATED_IN_BOTTLE) * EVAPORATION_HEAT_J_MOL
             * faults.at_stage(FaultKind.LIQUID_CARRY_OVER, unit.stages[p.stage].number)
         ),
-    )  # fmt: skip
+    }  # fmt: skip
+    ends = np.zeros(len(where), dtype=END)
+    for name, value in values.items():
+        ends[name] = value
+    return ends
 
 
 def bottle_evaporation(unit: Unit, faults: Faults) -> Floats:

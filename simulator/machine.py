@@ -8,7 +8,7 @@ from typing import Final
 import numpy as np
 
 from model.machine import Unit
-from simulator.cylinder import RATE_COLUMNS, WALL_AREA, WALL_AREA_HEAT, Ends, EndState
+from simulator.cylinder import MOVING, RATE_COLUMNS, WALL_AREA, WALL_AREA_HEAT, Records
 from simulator.eos import gas_enthalpy, gas_row, gas_state, gas_volume
 from simulator.equipment import (
     ConditionError,
@@ -28,7 +28,7 @@ from simulator.layout import (
     line_areas,
     places,
 )
-from simulator.network import FINAL_RECYCLE, FIRST_RECYCLE, INLET, LINES, Network, turn
+from simulator.network import FINAL_RECYCLE, FIRST_RECYCLE, FLOW_COLUMNS, INLET, LINES, Network, turn
 from simulator.outcome import Card, MachineOutcome
 from simulator.reckoning import Run, cards, reckon
 from simulator.wet_gas import water_held, wetted
@@ -82,7 +82,6 @@ class Machine:
         self._draw = SealedDraw.from_seed(draw, unit.id) if isinstance(draw, int) else draw
         self._steps = steps
         self._places = places(unit)
-        self._crank = crank_of(unit, steps)
         self._volumes = bottle_volumes(unit, equipment)
         self._inlet_area, self._line_area = line_areas(unit, equipment)
         self.around = around
@@ -148,7 +147,7 @@ class Machine:
     def _fill(self) -> None:
         around, stages = self.around, len(self.unit.stages)
         ratio = (around.discharge_pressure_pa / around.suction_pressure_pa) ** (1.0 / stages)
-        amount, temperature = np.empty(2 * stages), np.empty(2 * stages)
+        amount, temperature, pressures = (np.empty(2 * stages) for _ in range(3))
         for k in range(stages):
             suction_pa = around.suction_pressure_pa * ratio**k
             suction_k = around.suction_temperature_k if k == 0 else float(self._cooled_k[k - 1])
@@ -157,21 +156,20 @@ class Machine:
                 (2 * k + 1, suction_pa * ratio, suction_k * ratio**0.25),
             )
             for j, pressure, hot in states:
-                temperature[j] = hot
+                temperature[j], pressures[j] = hot, pressure
                 amount[j] = self._volumes[j] / gas_volume(hot, pressure, self._gas[k])
         self._bottle_amount, self._bottle_temperature = amount, temperature
+        self._bottle_mean = np.column_stack((pressures, temperature))  # over the last turn
         count = len(self._places)
         ends = self._ends()
-        moving = EndState(*(np.zeros(count) for _ in EndState._fields))
+        volume = crank_of(self.unit, ends, self._steps).volume[:, 0]
+        moving = np.zeros(count, dtype=MOVING)
         for e, place in enumerate(self._places):
             j = 2 * place.stage
             density = amount[j] / self._volumes[j]
-            at = ends.offset[e]
-            x = self._crank.position[at]
-            x = x if ends.side[e] > 0.0 else self._crank.stroke - x
-            moving.amount[e] = density * (ends.clearance[e] + ends.area[e] * x)
-            moving.passage_amount[e] = density * ends.passage_volume[e]
-            moving.temperature[e] = moving.passage_temperature[e] = temperature[j]
+            moving["amount"][e] = density * volume[e]
+            moving["passage_amount"][e] = density * ends["passage_volume"][e]
+            moving["temperature"][e] = moving["passage_temperature"][e] = temperature[j]
         self._moving = moving
 
     def _dry(self) -> Mapping[str, float]:
@@ -187,7 +185,7 @@ class Machine:
         held = water_held(self._dry(), around.suction_temperature_k, around.suction_pressure_pa)
         return around.saturation * held
 
-    def _ends(self) -> Ends:
+    def _ends(self) -> Records:
         turning = replace(self.around, speed_rad_s=self.speed_rad_s)
         return lay_out_ends(
             self.unit, self.equipment, self._draw, self.faults, turning, self._steps, self._wall
@@ -198,6 +196,7 @@ class Machine:
         stages = self.unit.stages
         self._gas = np.array([self._row(y) for y in self._water])
         self._turning = self._ends()
+        self._crank = crank_of(self.unit, self._turning, self._steps)
         first = around.first_recycle + faults.at_unit(FaultKind.FIRST_RECYCLE_PASSING)
         final = around.final_recycle + faults.at_unit(FaultKind.FINAL_RECYCLE_PASSING)
         relief = [faults.at_stage(FaultKind.RELIEF_PASSING, s.number) for s in stages]
@@ -235,9 +234,9 @@ class Machine:
             load = max(0.02, self._line_flow[k] / self.equipment.design_flow_mol_s)
             effectiveness = 1.0 - math.exp(-units * load**-_COOLER_POWER)
             effectiveness *= 1.0 - min(1.0, self.faults.at_stage(FaultKind.COOLER_WATER_LOSS, number))
-            hot = self._bottle_temperature[2 * k + 1]
+            hot = self._bottle_mean[2 * k + 1, 1]
             cooled = around.cooling_water_k + (1.0 - effectiveness) * (hot - around.cooling_water_k)
-            pressure = self._bottle_pressure(2 * k + 2) if k + 1 < stages else around.discharge_pressure_pa
+            pressure = self._bottle_mean[2 * k + 2, 0] if k + 1 < stages else around.discharge_pressure_pa
             held = water_held(self._dry(), cooled, pressure) if moist[k] > 0.0 else 0.0
             moist[k + 1] = min(moist[k], held)
             network.vapour_share[k] = (1.0 - moist[k]) / (1.0 - moist[k + 1])
@@ -259,10 +258,6 @@ class Machine:
                 self._gas[k] = self._row(float(y))
                 self._water[k] = y
 
-    def _bottle_pressure(self, j: int) -> float:
-        volume = self._volumes[j] / self._bottle_amount[j]
-        return gas_state(self._bottle_temperature[j], volume, self._gas[j // 2])[0]
-
     def _mix_at_suction(self, flows: Floats) -> float:
         """Water in the first suction bottle: the header's and that of both recycles, by flow."""
         water = self._water
@@ -278,6 +273,7 @@ class Machine:
         aim = (heat + jacket * self.around.jacket_water_k) / (film + jacket)
         share = 1.0 - math.exp(-period / WALL_LAG_S) if relax is None else relax
         self._wall += share * (aim - self._wall)
+        self._turning["wall_temperature"] = self._wall
         self._line_flow = flows[LINES : LINES + len(self.unit.stages), 0] / period
         if self._water.any() or self.around.saturation > 0.0:
             self._set_water(np.concatenate(([self._mix_at_suction(flows)], self._water[1:])))
@@ -290,20 +286,21 @@ class Machine:
         run = Run(
             unit=self.unit, equipment=self.equipment, around=self.around, places=self._places,
             ends=self._turning, crank=self._crank, turns=turns, sums=np.zeros((count, RATE_COLUMNS)),
-            flows=np.zeros((LINES + 2 * stages, 2)), bottles=np.zeros((2 * stages, 2)),
-            condensate=np.zeros(stages), trace=np.zeros((count, self._steps)), volumes=self._volumes,
+            flows=np.zeros((LINES + 2 * stages, FLOW_COLUMNS)), bottles=np.zeros((2 * stages, 2)),
+            trace=np.zeros((count, self._steps)), volumes=self._volumes,
             inlet_water=self._header_water(),
         )  # fmt: skip
-        run.start(self._crank, self._gas, self._moving, self._bottle_amount)
+        run.start(self._gas, self._moving, self._bottle_amount)
         for _ in range(turns):
             speed = self.speed_rad_s
-            sums, flows = np.zeros_like(run.sums), np.zeros_like(run.flows)
+            sums, flows, bottles = (np.zeros_like(x) for x in (run.sums, run.flows, run.bottles))
             turn(
                 self._turning, self._crank, self._network, self._gas, self._moving, self._bottle_amount,
-                self._bottle_temperature, speed, sums, flows, run.bottles, run.trace,
+                self._bottle_temperature, speed, sums, flows, bottles, run.trace,
             )  # fmt: skip
             period = 2.0 * math.pi / speed
-            run.add(period, sums, flows, self._network.vapour_share)
+            run.add(period, sums, flows, bottles)
+            self._bottle_mean = bottles / period
             self._after_turn(sums, flows, period, relax)
             driver = self.equipment.driver
             self._load = driver.shaft_power(run.indicated_w) / driver.rated_power_w

@@ -25,12 +25,10 @@ from simulator.cylinder import (
     WALL_FILM,
     WORK,
     Crank,
-    Ends,
-    EndState,
+    Records,
     bounded,
     end_rates,
     end_states,
-    end_volume,
     exchange,
     leak_rates,
     move_plates,
@@ -39,7 +37,8 @@ from simulator.cylinder import (
 from simulator.eos import gas_state
 from simulator.gas_data import Floats
 
-# rows of a table of flows: amount x dt and enthalpy x dt in its two columns
+# rows of a table of flows; its columns: amount, enthalpy, amount lost as condensate behind the cooler
+FLOW_COLUMNS: Final = 3
 INLET: Final = 0  # header into the first suction bottle
 FIRST_RECYCLE: Final = 1
 FINAL_RECYCLE: Final = 2
@@ -93,6 +92,7 @@ def line_flows(network: Network, bottles: Floats, gas: Floats, flows: Floats) ->
         if k + 1 == stages and flow < 0.0:  # non-return valve
             flow = heat = 0.0
         flows[LINES + k, 0], flows[LINES + k, 1] = flow, heat
+        flows[LINES + k, 2] = flow * (1.0 - network.vapour_share[k])  # gas that swings back takes it along
         relief = network.relief_area[k]
         flow = heat = 0.0
         if relief > 0.0:
@@ -102,12 +102,12 @@ def line_flows(network: Network, bottles: Floats, gas: Floats, flows: Floats) ->
 
 
 @compiled
-def bottle_gains(network: Network, ends: Ends, rates: Floats, flows: Floats, gain: Floats) -> None:
+def bottle_gains(network: Network, ends: Records, rates: Floats, flows: Floats, gain: Floats) -> None:
     """Moles and enthalpy that each bottle gains in unit time."""
     stages = network.line_area.size
     gain[:] = 0.0
-    for e in range(ends.area.size):
-        k = ends.stage[e]
+    for e in range(ends.size):
+        k = ends[e]["stage"]
         gain[2 * k, 0] -= rates[e, NOZZLE]
         gain[2 * k, 1] -= rates[e, NOZZLE + 1]
         gain[2 * k + 1, 0] += rates[e, DISCHARGE]
@@ -124,7 +124,7 @@ def bottle_gains(network: Network, ends: Ends, rates: Floats, flows: Floats, gai
         gain[2 * k + 1, 0] -= flow + flows[LINES + stages + k, 0]
         gain[2 * k + 1, 1] -= heat + flows[LINES + stages + k, 1]
         if k + 1 < stages:
-            arriving = flow * network.vapour_share[k] if flow > 0.0 else flow
+            arriving = flow - flows[LINES + k, 2]
             gain[2 * k + 2, 0] += arriving
             if flow > 0.0:
                 heat = arriving * (network.cooled_enthalpy[k] - network.evaporation[k + 1])
@@ -146,33 +146,58 @@ def move_bottles(bottles: Floats, gain: Floats, amount: Floats, temperature: Flo
 
 
 @compiled
-def move_ends(ends: Ends, moving: EndState, first: Floats, second: Floats, step: float, sums: Floats) -> None:
-    """Heun's corrector of every end, and the sums over the turn."""
-    for e in range(ends.area.size):
+def predict(
+    moving: Records, first: Floats, second: Floats, step: float, ahead: Records, sums: Floats
+) -> None:
+    """Heun's predictor of every end; plates stand as they now are."""
+    for e in range(moving.size):
+        now, then = moving[e], ahead[e]
+        second[e, WALL_FILM] = first[e, WALL_FILM]
+        n, t, out = bounded(
+            now["amount"] + step * first[e, AMOUNT], now["temperature"] + step * first[e, TEMPERATURE]
+        )
+        then["amount"], then["temperature"] = n, t
+        n, t, out_too = bounded(
+            now["passage_amount"] + step * first[e, PASSAGE_AMOUNT],
+            now["passage_temperature"] + step * first[e, PASSAGE_TEMPERATURE],
+        )
+        then["passage_amount"], then["passage_temperature"] = n, t
+        then["suction_lift"], then["discharge_lift"] = now["suction_lift"], now["discharge_lift"]
+        then["pushed_back"] = now["pushed_back"]
+        sums[e, CLIPPED] += out + out_too
+
+
+@compiled
+def correct(moving: Records, first: Floats, second: Floats, step: float, sums: Floats) -> None:
+    """Heun's corrector of every end, and the sums over the turn; ``second`` then holds the mean rates."""
+    for e in range(moving.size):
+        now = moving[e]
         for i in range(WORK):
             mean = 0.5 * (first[e, i] + second[e, i])
             second[e, i] = mean
             sums[e, i] += step * mean
         n, t, out = bounded(
-            moving.amount[e] + step * second[e, AMOUNT], moving.temperature[e] + step * second[e, TEMPERATURE]
+            now["amount"] + step * second[e, AMOUNT], now["temperature"] + step * second[e, TEMPERATURE]
         )
-        moving.amount[e], moving.temperature[e] = n, t
-        passage_n, passage_t, out_too = bounded(
-            moving.passage_amount[e] + step * second[e, PASSAGE_AMOUNT],
-            moving.passage_temperature[e] + step * second[e, PASSAGE_TEMPERATURE],
+        now["amount"], now["temperature"] = n, t
+        n, t, out_too = bounded(
+            now["passage_amount"] + step * second[e, PASSAGE_AMOUNT],
+            now["passage_temperature"] + step * second[e, PASSAGE_TEMPERATURE],
         )
-        moving.passage_amount[e], moving.passage_temperature[e] = passage_n, passage_t
-        sums[e, PASSAGE_MEAN] += step * passage_t
+        now["passage_amount"], now["passage_temperature"] = n, t
+        given = now["pushed_back"] - step * second[e, NOZZLE]
+        now["pushed_back"] = min(n, max(0.0, given))
+        sums[e, PASSAGE_MEAN] += step * t
         sums[e, CLIPPED] += out + out_too
 
 
 @compiled
 def turn(
-    ends: Ends,
+    ends: Records,
     crank: Crank,
     network: Network,
     gas: Floats,
-    moving: EndState,
+    moving: Records,
     bottle_amount: Floats,
     bottle_temperature: Floats,
     speed: float,
@@ -182,8 +207,7 @@ def turn(
     trace: Floats,
 ) -> None:
     """One turn of the crank at a steady speed [rad/s]; sums and traces are added to, never cleared."""
-    steps = crank.position.size
-    count = ends.area.size
+    count, steps = ends.size, trace.shape[1]
     step = 2.0 * np.pi / speed / steps
     drive = (speed, step)
     state = np.empty((count, STATE_COLUMNS))
@@ -193,41 +217,30 @@ def turn(
     bottles = np.empty((bottle_amount.size, STATE_COLUMNS // 2))
     gain = np.zeros((bottle_amount.size, 2))
     flows = np.zeros(flow_sums.shape)
-    lifts = (moving.suction_lift, moving.discharge_lift)
-    now = (moving.amount, moving.temperature, moving.passage_amount, moving.passage_temperature)
-    ahead = (np.empty(count), np.empty(count), np.empty(count), np.empty(count))
+    ahead = moving.copy()
     for i in range(steps):
         bottle_states(network, bottle_amount, bottle_temperature, gas, bottles)
-        end_states(i, ends, crank, gas, now, state)
+        end_states(i, ends, crank, gas, moving, state)
         wall_films(ends, gas, state, first)
         leak_rates(ends, gas, network.vent_pa, step, state, first)
-        end_rates(i, ends, crank, gas, bottles, now, lifts, drive, state, first)
+        end_rates(i, ends, crank, gas, bottles, moving, drive, state, first)
         move_plates(ends, moving, bottles, state, step)
-        for e in range(count):
-            second[e, WALL_FILM] = first[e, WALL_FILM]
-            n, t, out = bounded(now[0][e] + step * first[e, AMOUNT], now[1][e] + step * first[e, TEMPERATURE])
-            ahead[0][e], ahead[1][e] = n, t
-            n, t, out_too = bounded(
-                now[2][e] + step * first[e, PASSAGE_AMOUNT], now[3][e] + step * first[e, PASSAGE_TEMPERATURE]
-            )
-            ahead[2][e], ahead[3][e] = n, t
-            sums[e, CLIPPED] += out + out_too
-            trace[e, (i + ends.offset[e]) % steps] += state[e, PRESSURE]
+        predict(moving, first, second, step, ahead, sums)
         end_states(i + 1, ends, crank, gas, ahead, after)
         leak_rates(ends, gas, network.vent_pa, step, after, second)
-        end_rates(i + 1, ends, crank, gas, bottles, ahead, lifts, drive, after, second)
+        end_rates(i + 1, ends, crank, gas, bottles, ahead, drive, after, second)
+        correct(moving, first, second, step, sums)
         for e in range(count):
-            before, _ = end_volume(e, i, ends, crank)
-            behind, _ = end_volume(e, i + 1, ends, crank)
-            sums[e, WORK] -= 0.5 * (state[e, PRESSURE] + after[e, PRESSURE]) * (behind - before)
-        move_ends(ends, moving, first, second, step, sums)
+            mean = 0.5 * (state[e, PRESSURE] + after[e, PRESSURE])
+            sums[e, WORK] -= mean * (crank.volume[e, i + 1] - crank.volume[e, i])
+            trace[e, (i + ends[e]["offset"]) % steps] += state[e, PRESSURE]
         line_flows(network, bottles, gas, flows)
-        for j in range(bottles.shape[0]):
+        for j in range(bottle_amount.size):
             bottle_sums[j, 0] += step * bottles[j, PRESSURE]
             bottle_sums[j, 1] += step * bottle_temperature[j]
         for j in range(flow_sums.shape[0]):
-            flow_sums[j, 0] += step * flows[j, 0]
-            flow_sums[j, 1] += step * flows[j, 1]
+            for column in range(FLOW_COLUMNS):
+                flow_sums[j, column] += step * flows[j, column]
         if not network.pinned:
             bottle_gains(network, ends, second, flows, gain)
             sums[0, CLIPPED] += move_bottles(bottles, gain, bottle_amount, bottle_temperature, step)

@@ -17,9 +17,7 @@ from simulator.cylinder import (
     WALL_HEAT,
     WORK,
     Crank,
-    Ends,
-    EndState,
-    end_volume,
+    Records,
 )
 from simulator.eos import gas_state, gas_temperature, gas_volume
 from simulator.equipment import Equipment, Surroundings
@@ -41,13 +39,12 @@ class Run:
     equipment: Equipment
     around: Surroundings
     places: tuple[Place, ...]
-    ends: Ends
+    ends: Records
     crank: Crank
     turns: int
     sums: Floats
     flows: Floats
     bottles: Floats
-    condensate: Floats
     trace: Floats
     volumes: Floats
     inlet_water: float
@@ -59,32 +56,35 @@ class Run:
     cooled_k: Floats = field(default_factory=lambda: np.zeros(0))
     wall: Floats = field(default_factory=lambda: np.zeros(0))
 
-    def start(self, crank: Crank, gas: Floats, moving: EndState, bottle_amount: Floats) -> None:
-        self._store(crank, gas, moving, bottle_amount)
+    @property
+    def condensate(self) -> Floats:
+        """Moles drained behind each stage."""
+        return self.flows[LINES : LINES + len(self.unit.stages), 2]
 
-    def add(self, period_s: float, sums: Floats, flows: Floats, vapour_share: Floats) -> None:
+    def start(self, gas: Floats, moving: Records, bottle_amount: Floats) -> None:
+        self._store(gas, moving, bottle_amount)
+
+    def add(self, period_s: float, sums: Floats, flows: Floats, bottles: Floats) -> None:
         self.sums += sums
         self.flows += flows
+        self.bottles += bottles
         self.duration_s += period_s
         self.indicated_w = float(sums[:, WORK].sum()) / period_s
-        stages = len(self.condensate)
-        self.condensate += np.maximum(flows[LINES : LINES + stages, 0], 0.0) * (1.0 - vapour_share)
 
-    def finish(self, gas: Floats, moving: EndState, bottle_amount: Floats) -> None:
-        self._store(self.crank, gas, moving, bottle_amount)
+    def finish(self, gas: Floats, moving: Records, bottle_amount: Floats) -> None:
+        self._store(gas, moving, bottle_amount)
         self.gas = gas.copy()
 
     def note(self, water: Floats, cooled_k: Floats, wall: Floats) -> None:
         self.water, self.cooled_k, self.wall = water.copy(), cooled_k.copy(), wall.copy()
 
-    def _store(self, crank: Crank, gas: Floats, moving: EndState, bottle_amount: Floats) -> None:
+    def _store(self, gas: Floats, moving: Records, bottle_amount: Floats) -> None:
         energy = 0.0
         for e in range(len(self.places)):
-            volume, _ = end_volume(e, 0, self.ends, crank)
-            n = float(moving.amount[e])
-            p, _, h, _ = gas_state(float(moving.temperature[e]), volume / n, gas[self.ends.stage[e]])
+            volume, n = float(self.crank.volume[e, 0]), float(moving["amount"][e])
+            p, _, h, _ = gas_state(float(moving["temperature"][e]), volume / n, gas[self.ends["stage"][e]])
             energy += n * h - p * volume
-        moles = float(moving.amount.sum() + moving.passage_amount.sum() + bottle_amount.sum())
+        moles = float(moving["amount"].sum() + moving["passage_amount"].sum() + bottle_amount.sum())
         self.stored.append((moles, energy))
 
 
@@ -95,7 +95,7 @@ def _mean(run: Run, e: int, column: int) -> float:
 def _delivered_k(run: Run, ends: list[int], stage: int) -> float:
     flow = sum(_mean(run, e, DISCHARGE) for e in ends)
     pressure, hot = run.bottles[2 * stage + 1] / run.duration_s
-    swept = sum(float(run.ends.area[e]) for e in ends) * run.unit.stroke_m * run.turns / run.duration_s
+    swept = sum(float(run.ends["area"][e]) for e in ends) * run.unit.stroke_m * run.turns / run.duration_s
     least = _THROUGH_FLOW * swept / _suction_volume(run, stage)
     if flow < least:
         return math.nan
@@ -110,7 +110,7 @@ def _suction_volume(run: Run, stage: int) -> float:
 
 def _end(run: Run, e: int) -> EndOutcome:
     stage = run.places[e].stage
-    swept = float(run.ends.area[e]) * run.unit.stroke_m * run.turns / run.duration_s
+    swept = float(run.ends["area"][e]) * run.unit.stroke_m * run.turns / run.duration_s
     return EndOutcome(
         side=run.places[e].end.side,
         volumetric_efficiency=_mean(run, e, DISCHARGE) * _suction_volume(run, stage) / swept,
@@ -124,7 +124,7 @@ def _end(run: Run, e: int) -> EndOutcome:
 
 def cards(run: Run) -> tuple[Card, ...]:
     """Pressures and loads over each cylinder's own crank angle."""
-    moved = motion(run.unit.stroke_m, run.unit.connecting_rod_m, run.crank.position.size)
+    moved = motion(run.unit.stroke_m, run.unit.connecting_rod_m, run.trace.shape[1])
     speed = 2.0 * math.pi * run.turns / run.duration_s
     ambient = run.around.ambient_pressure_pa
     found = []
@@ -135,8 +135,8 @@ def cards(run: Run) -> tuple[Card, ...]:
         for e in ends:
             x = moved.position_m
             way = x if run.places[e].end.side is Side.HEAD else run.unit.stroke_m - x
-            volumes[run.places[e].end.side] = run.ends.clearance[e] + run.ends.area[e] * way
-        still = np.full(run.crank.position.size, ambient)  # behind a piston face that compresses nothing
+            volumes[run.places[e].end.side] = run.ends["clearance"][e] + run.ends["area"][e] * way
+        still = np.full(run.trace.shape[1], ambient)  # behind a piston face that compresses nothing
         head, crank = cylinder.head_area_m2, cylinder.crank_area_m2
         gas = pressures.get(Side.CRANK, still) * crank - pressures.get(Side.HEAD, still) * head
         gas = gas + ambient * (head - crank)
@@ -196,11 +196,11 @@ def _closure(run: Run, export: float) -> Closure:
     heat = run.sums[:, SUCTION + 1] - run.sums[:, DISCHARGE + 1] - run.sums[:, PACKING + 1]
     heat = heat + run.sums[:, WALL_HEAT] + run.sums[:, WORK]
     work = float(np.abs(run.sums[:, WORK]).sum())
-    steps = run.turns * run.crank.position.size * len(run.places)
+    steps = run.turns * run.trace.shape[1] * len(run.places)
     return Closure(
         amount=(into - out - (moles_after - moles_before)) / into if into else math.nan,
         energy=(float(heat.sum()) - (energy_after - energy_before)) / work if work else math.nan,
-        held_back=float(run.sums[:, HELD_BACK].sum()) * run.crank.position.size * run.turns
+        held_back=float(run.sums[:, HELD_BACK].sum()) * run.trace.shape[1] * run.turns
         / run.duration_s / (_OPENINGS * steps),
         clipped=float(run.sums[:, CLIPPED].sum()) / (2 * steps),
     )  # fmt: skip
