@@ -49,6 +49,8 @@ class Ports:
             "--address",
             f"field-bus=mqtt://127.0.0.1:{self.mqtt}",
             "--address",
+            f"field-gateway=mqtt://127.0.0.1:{self.mqtt}",
+            "--address",
             f"control-system=opc.tcp://127.0.0.1:{self.opcua}/ostmere",
         ]
 
@@ -203,7 +205,7 @@ def _is_live(url: str) -> bool:
 
 
 def _tell(url: str, waited_s: float, story: dict[str, Any]) -> None:
-    _say(f"\nLive numbers of both units after {waited_s:.0f} s:  {url}/\n")
+    _say(f"\nLive numbers of all units after {waited_s:.0f} s:  {url}/\n")
     site = ZoneInfo(story["time_zone"])
     rows = [(datetime.fromtimestamp(at, site), text) for at, text in story["timetable"]]
     differs = any(at.utcoffset() != at.astimezone().utcoffset() for at, _ in rows)

@@ -1,4 +1,4 @@
-"""The plant as a process: machines, instruments and both wires in one asyncio program."""
+"""The plant as a process: machines, instruments and all wires in one asyncio program."""
 
 import argparse
 import asyncio
@@ -120,7 +120,7 @@ def run(
 ) -> int:
     """Run the plant until SIGINT or SIGTERM; 0 if it ended as asked, 1 if it could not start.
 
-    It says ``plant up`` once both wires are up; with ``timetable`` also a line of JSON: what happens when.
+    It says ``plant up`` once all wires are up; with ``timetable`` also a line of JSON: what happens when.
     """
     logging.basicConfig(level=logging.WARNING, format="plant: %(message)s")
     logging.getLogger("asyncua").setLevel(logging.CRITICAL)  # a client that hangs up is no news here

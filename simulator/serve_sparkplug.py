@@ -40,7 +40,7 @@ from simulator.plant import Sample
 
 CLIENT_ID = "ostmere-field-gateway"
 KEPT_S = 600  # samples kept while the broker is away; the oldest go after that
-REBIRTH_S = 10.0
+REBIRTH_S = 5.0
 
 _AT_LEAST_ONCE: Final = 1  # the will and commands; data goes at most once
 

@@ -1,17 +1,18 @@
-"""Steady tables of the two invented machines: the inside of the plant, for now.
+"""Steady tables of the three invented machines: the inside of the plant, for now.
 
 This is a table with straight lines between its nodes, not crank-angle physics; it answers what the tags of a
 machine show once everything has come to rest. Crank-angle equations will replace it behind the same doors,
 `MACHINES` and `Machine.tags`. It knows nothing of the model's formulas and imports none of them.
 
-Source of the nodes marked *given*: the project's earlier first-principles study of these two invented
+Source of the nodes marked *given*: the project's earlier first-principles study of these invented
 machines (a crank-angle code with its own gas law). That is another code's output, so agreement with it is
 verification, not validation. All other numbers are this file's own estimates and say how they were found.
 
 K-110: straight lines over the logarithm of the pressure ratio through two given nodes (30 and 24 bar(a) in
 the suction header), running on beyond them: volumetric efficiency, temperature exponent and specific work.
 The given nodes are for a 57 mm rod; the machine has a 63 mm rod: flow and power shrink with the swept volume.
-K-220: one node per load step; pressures follow small header swings by fixed exponents.
+K-220 and K-330: one node per load step; pressures follow small header swings by fixed exponents. The head-end
+pockets of K-330 are not on its nameplate yet and not in its table.
 """
 
 import math
@@ -192,25 +193,84 @@ class Booster:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class TrainNode:
-    """One load step of K-220 with 18 and 140 bar(a) in the headers."""
+    """One load step of a train with rated pressures in the headers; one number per stage."""
 
-    suction_bar: tuple[float, float, float]
-    discharge_bar: tuple[float, float, float]
-    discharge_k: tuple[float, float, float]
+    suction_bar: tuple[float, ...]
+    discharge_bar: tuple[float, ...]
+    discharge_k: tuple[float, ...]
     flow_kg_s: float
     power_w: float
 
 
+@dataclass(frozen=True, slots=True, kw_only=True)
 class Train:
-    """K-220: hydrogen-rich gas, three stages, four throws, synchronous motor."""
+    """A machine of several stages in a row."""
 
-    _HEADERS = (18 * BAR, 140 * BAR)
-    _SUCTION_K = (308.0, 309.0, 308.0)  # given
-    _MOLAR_MASS = 0.003889  # kg/mol, hand, from the composition in the site file
-    # How pressures answer header swings, by hand: three stages in a row whose volumetric efficiency falls by
-    # .19 % for each 1 % of ratio. Rows: suction of stage 1, 2, 3; columns: suction, discharge header.
-    _FOLLOW = ((1.0, 0.0), (0.98, 0.02), (0.84, 0.16))
-    _NODES: Mapping[str, TrainNode] = MappingProxyType(
+    headers_pa: tuple[float, float]
+    suction_k: tuple[float, ...]
+    molar_mass: float  # kg/mol
+    speed_rad_s: float  # at which the nodes hold
+    # How pressures answer header swings. Rows: suction of each stage; columns: suction, discharge header.
+    follow: tuple[tuple[float, float], ...]
+    nodes: Mapping[str, TrainNode]
+    slip_per_w: float = 0.0  # of an induction motor: how far it falls behind for each watt it draws
+
+    @property
+    def steps(self) -> tuple[str, ...]:
+        return tuple(self.nodes)
+
+    @property
+    def rated(self) -> Conditions:
+        return Conditions(
+            suction_header_pa=self.headers_pa[0],
+            discharge_header_pa=self.headers_pa[1],
+            suction_temperature_k=self.suction_k[0],
+            load_step=next(iter(self.nodes)),
+            speed_rad_s=self.speed_rad_s,
+        )
+
+    def tags(self, at: Conditions) -> Mapping[str, float]:
+        node = self.nodes.get(at.load_step)
+        if node is None:
+            raise UnknownStepError(at.load_step, self.steps)
+        if not at.running or at.speed_rad_s <= 0:
+            return _standing(at, stages=len(self.suction_k))
+        swing = (at.suction_header_pa / self.headers_pa[0], at.discharge_header_pa / self.headers_pa[1])
+        factors = [swing[0] ** s * swing[1] ** d for s, d in self.follow]
+        outlet_factors = [*factors[1:], swing[1]]
+        power = node.power_w * factors[1] * at.speed_rad_s / self.speed_rad_s / MOTOR_AND_DRIVE
+        behind = 1 - self.slip_per_w * power
+        speed = at.speed_rad_s / self.speed_rad_s * behind
+        flow = node.flow_kg_s * factors[0] * speed * self.suction_k[0] / at.suction_temperature_k
+        values: dict[str, float] = {}
+        for i, cooled_k in enumerate(self.suction_k):
+            stage = f"stage{i + 1}"
+            inlet_k = at.suction_temperature_k if i == 0 else cooled_k
+            suction = node.suction_bar[i] * BAR * factors[i]
+            discharge = node.discharge_bar[i] * BAR * outlet_factors[i]
+            node_ln = math.log(node.discharge_bar[i] / node.suction_bar[i])
+            exponent = math.log(node.discharge_k[i] / cooled_k) / node_ln
+            values[f"{stage}.suction_pressure"] = suction
+            values[f"{stage}.discharge_pressure"] = discharge
+            values[f"{stage}.suction_temperature"] = inlet_k
+            values[f"{stage}.discharge_temperature"] = inlet_k * (discharge / suction) ** exponent
+        return values | {
+            "unit.speed": at.speed_rad_s * behind,
+            "unit.flow": flow / self.molar_mass,
+            "unit.electrical_power": power * behind,
+            "unit.run_signal": 1.0,
+        }
+
+
+# Hydrogen-rich gas, three stages, four throws, synchronous motor.
+K220: Final = Train(
+    headers_pa=(18 * BAR, 140 * BAR),
+    suction_k=(308.0, 309.0, 308.0),  # given
+    molar_mass=0.003889,  # hand, from the composition in the site file
+    speed_rad_s=375 * RPM,
+    # By hand: three stages in a row whose volumetric efficiency falls by .19 % for each 1 % of ratio.
+    follow=((1.0, 0.0), (0.98, 0.02), (0.84, 0.16)),
+    nodes=MappingProxyType(
         {
             # given, whole row
             "100": TrainNode(
@@ -229,7 +289,7 @@ class Train:
                 flow_kg_s=0.70,
                 power_w=1163e3,
             ),
-            # given: power. Pressures between stages as in `_FOLLOW`, with the swept shares of the head ends
+            # given: power. Pressures between stages as in `follow`, with the swept shares of the head ends
             # (stage 3 has the largest, so it draws its suction down); temperatures and flow as above.
             "50-crank-open": TrainNode(
                 suction_bar=(17.97, 36.86, 71.30),
@@ -239,51 +299,42 @@ class Train:
                 power_w=1284e3,
             ),
         }
-    )
+    ),
+)
 
-    @property
-    def steps(self) -> tuple[str, ...]:
-        return tuple(self._NODES)
-
-    @property
-    def rated(self) -> Conditions:
-        return Conditions(
-            suction_header_pa=self._HEADERS[0],
-            discharge_header_pa=self._HEADERS[1],
-            suction_temperature_k=self._SUCTION_K[0],
-            load_step="100",
-            speed_rad_s=375 * RPM,
-        )
-
-    def tags(self, at: Conditions) -> Mapping[str, float]:
-        node = self._NODES.get(at.load_step)
-        if node is None:
-            raise UnknownStepError(at.load_step, self.steps)
-        if not at.running or at.speed_rad_s <= 0:
-            return _standing(at, stages=3)
-        swing = (at.suction_header_pa / self._HEADERS[0], at.discharge_header_pa / self._HEADERS[1])
-        factors = [swing[0] ** s * swing[1] ** d for s, d in self._FOLLOW]
-        outlet_factors = [*factors[1:], swing[1]]
-        speed = at.speed_rad_s / self.rated.speed_rad_s
-        flow = node.flow_kg_s * factors[0] * speed * self._SUCTION_K[0] / at.suction_temperature_k
-        values: dict[str, float] = {}
-        for i in range(3):
-            stage = f"stage{i + 1}"
-            inlet_k = at.suction_temperature_k if i == 0 else self._SUCTION_K[i]
-            suction = node.suction_bar[i] * BAR * factors[i]
-            discharge = node.discharge_bar[i] * BAR * outlet_factors[i]
-            node_ln = math.log(node.discharge_bar[i] / node.suction_bar[i])
-            exponent = math.log(node.discharge_k[i] / self._SUCTION_K[i]) / node_ln
-            values[f"{stage}.suction_pressure"] = suction
-            values[f"{stage}.discharge_pressure"] = discharge
-            values[f"{stage}.suction_temperature"] = inlet_k
-            values[f"{stage}.discharge_temperature"] = inlet_k * (discharge / suction) ** exponent
-        return values | {
-            "unit.speed": at.speed_rad_s,
-            "unit.flow": flow / self._MOLAR_MASS,
-            "unit.electrical_power": node.power_w * factors[1] * speed / MOTOR_AND_DRIVE,
-            "unit.run_signal": 1.0,
+# Natural gas, two stages, four throws, induction motor: 750 rpm without load.
+K330: Final = Train(
+    headers_pa=(5 * BAR, 34 * BAR),
+    suction_k=(300.0, 308.0),  # given
+    molar_mass=0.017975,  # hand, the composition is that of K-110
+    speed_rad_s=750 * RPM,
+    slip_per_w=0.013 / 1250e3,  # own estimate: 1.3 % at the rated 1250 kW
+    # By hand: two stages whose volumetric efficiency falls by .29 and .35 % for each 1 % of ratio.
+    follow=((1.0, 0.0), (0.79, 0.21)),
+    nodes=MappingProxyType(
+        {
+            # given, whole row
+            "100": TrainNode(
+                suction_bar=(4.97, 12.39),
+                discharge_bar=(12.45, 34.18),
+                discharge_k=(370.7, 389.2),
+                flow_kg_s=3.084,
+                power_w=989e3,
+            ),
+            # given: flow, head ends held open. Line losses a quarter of full load; the crank ends of stage 2
+            # sweep the smaller share, so the pressure between the stages rises by 1.1 %; temperatures by the
+            # exponents of full load plus 1.5 K of idle-end heating; power by the flow plus 4 %, which lies
+            # between what the half steps of the two other machines take.
+            "50": TrainNode(
+                suction_bar=(4.9925, 12.545),
+                discharge_bar=(12.56, 34.045),
+                discharge_k=(372.6, 389.2),
+                flow_kg_s=1.48,
+                power_w=494e3,
+            ),
         }
+    ),
+)
 
 
 def _standing(at: Conditions, stages: int) -> Mapping[str, float]:
@@ -302,4 +353,4 @@ def _standing(at: Conditions, stages: int) -> Mapping[str, float]:
     }
 
 
-MACHINES: Final[Mapping[str, Machine]] = MappingProxyType({"K-110": Booster(), "K-220": Train()})
+MACHINES: Final[Mapping[str, Machine]] = MappingProxyType({"K-110": Booster(), "K-220": K220, "K-330": K330})

@@ -39,7 +39,7 @@ def test_report_of_the_demo_site_says_what_it_holds() -> None:
     assert "cylinder 4 crank loaded loaded held open" in lines
     assert "inputs: 16 from control-system" in lines
     assert "load reversal at the pin, duration every cylinder 40°" in lines
-    assert "ostmere.yaml: no faults. 2 units, 25 inputs, 40 limits, 1 notice." in lines
+    assert "ostmere.yaml: no faults. 3 units, 38 inputs, 66 limits, 1 notice." in lines
     assert not any("no limit entered" in line for line in lines)
 
 
@@ -63,7 +63,7 @@ def test_report_of_a_faulty_file_is_its_faults_one_a_line() -> None:
     assert f"  {path}:37: units[0].stages[0].cylinders[0].rod: " in text
 
 
-@pytest.mark.parametrize("unit_id", ["K-110", "K-220"])
+@pytest.mark.parametrize("unit_id", ["K-110", "K-220", "K-330"])
 def test_projected_store_size_is_that_of_a_real_store(tmp_path: Path, unit_id: str) -> None:
     plan = load_site(OSTMERE).unit(unit_id)
     measured = _bytes_per_row_pair(tmp_path / "series.db", plan)

@@ -49,7 +49,7 @@ def stored(served: Served, unit: str, tick: int) -> dict[str, float]:
 def test_without_a_store_the_pages_say_no_data(open_page: Opener) -> None:
     screen = open_page("/")
     expect(screen.page.locator("#data-age")).to_have_text("no data yet")
-    expect(screen.page.locator("#site-rows tr")).to_have_count(2)
+    expect(screen.page.locator("#site-rows tr")).to_have_count(3)
     expect(screen.page.locator("#site-rows tr").first).to_contain_text("no data yet")
     screen.page.goto(screen.watch.address + "/unit/K-110")
     expect(screen.page.locator("#curves-blind")).to_have_text("not evaluated: no data yet")
@@ -234,7 +234,7 @@ def test_the_site_page_fits_and_the_whole_way_goes_by_keyboard(open_page: Opener
     screen = open_page("/")
     page = screen.page
     wait_fresh(screen)
-    expect(page.locator("#site-rows tr")).to_have_count(2)
+    expect(page.locator("#site-rows tr")).to_have_count(3)
     assert page.evaluate("document.documentElement.scrollHeight") <= 768
     assert page.evaluate("document.documentElement.scrollWidth") <= 1366
     # the thin unit first; the box puts the plant's order back
@@ -249,8 +249,8 @@ def test_the_site_page_fits_and_the_whole_way_goes_by_keyboard(open_page: Opener
     for _ in range(14):
         page.keyboard.press("Tab")
         reached.append(page.evaluate("document.activeElement.textContent.trim().slice(0, 12)"))
-    assert [w for w in ("Site", "K-110", "K-220", "Alarms", "Guide") if w in reached] == [
-        "Site", "K-110", "K-220", "Alarms", "Guide",
+    assert [w for w in ("Site", "K-110", "K-220", "K-330", "Alarms", "Guide") if w in reached] == [
+        "Site", "K-110", "K-220", "K-330", "Alarms", "Guide",
     ]  # fmt: skip
     page.get_by_label("Plant order").check()
     expect(page.locator("#site-rows tr").first).to_contain_text("K-110")

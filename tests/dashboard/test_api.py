@@ -130,15 +130,15 @@ def test_a_stopped_machine_has_no_old_numbers(client: FlaskClient, store: Writte
     assert unit["smallest"]["fault"] == "not evaluated"
     assert "machine not running" in unit["smallest"]["why"]
     assert not [n for n in unit["values"] if n.startswith("cylinder")]
-    assert found["worst_first"] == ["K-220", "K-110"]
+    assert found["worst_first"] == ["K-220", "K-330", "K-110"]
 
 
 def test_health_follows_the_age_of_the_data(
     client: FlaskClient, store: WrittenStore, clock: HandClock
 ) -> None:
     store.ticks(NOON, units=("K-110",))
-    assert client.get("/healthz").status_code == 503  # the other unit has no row
-    store.ticks(NOON, units=("K-220",))
+    assert client.get("/healthz").status_code == 503  # the others have no row
+    store.ticks(NOON, units=("K-220", "K-330"))
     assert client.get("/healthz").status_code == 200
     clock.advance(4.4)
     assert client.get("/healthz").status_code == 200
@@ -239,10 +239,10 @@ def test_the_most_urgent_unit_comes_first_then_the_smallest_share(
 ) -> None:
     store.ticks(NOON, changes={"K-110": {"stage1.suction_pressure": 24 * BAR}})
     found = blob(client)
-    assert found["worst_first"] == ["K-110", "K-220"]
-    assert found["plant_order"] == ["K-110", "K-220"]
+    assert found["worst_first"] == ["K-110", "K-220", "K-330"]
+    assert found["plant_order"] == ["K-110", "K-220", "K-330"]
     store.alarm(NOON)
-    assert blob(client)["worst_first"] == ["K-220", "K-110"]
+    assert blob(client)["worst_first"] == ["K-220", "K-110", "K-330"]
 
 
 def test_pages_of_another_site_file_say_so(store: WrittenStore, clock: HandClock) -> None:

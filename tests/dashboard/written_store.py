@@ -1,4 +1,4 @@
-"""A store of the two invented machines, written by the real writers and computed by the real model."""
+"""A store of the invented machines, written by the real writers and computed by the real model."""
 
 import math
 from collections.abc import Mapping
@@ -34,7 +34,7 @@ BAR = 1e5
 RPM = math.pi / 30
 NORMAL_M3_H = 101325 / (8.314462618 * 273.15) / 3600  # mol/s in one normal cubic metre an hour
 
-# Near the rated points of the two machines; only that they are possible matters here. # from memory
+# Near the rated points of the machines; only that they are possible matters here. # from memory
 K110 = {
     "stage1.suction_pressure": 29.81 * BAR,
     "stage1.discharge_pressure": 70.46 * BAR,
@@ -64,7 +64,22 @@ K220 = {
     "unit.load_step": 0.0,
     "unit.run_signal": 1.0,
 }
-RATED = {"K-110": K110, "K-220": K220}
+K330 = {
+    "stage1.suction_pressure": 4.97 * BAR,
+    "stage1.discharge_pressure": 12.45 * BAR,
+    "stage2.suction_pressure": 12.39 * BAR,
+    "stage2.discharge_pressure": 34.18 * BAR,
+    "stage1.suction_temperature": 300.0,
+    "stage1.discharge_temperature": 370.7,
+    "stage2.suction_temperature": 308.0,
+    "stage2.discharge_temperature": 389.2,
+    "unit.speed": 742 * RPM,
+    "unit.flow": 13_700 * NORMAL_M3_H,
+    "unit.electrical_power": 1_040e3,
+    "unit.load_step": 0.0,
+    "unit.run_signal": 1.0,
+}
+RATED = {"K-110": K110, "K-220": K220, "K-330": K330}
 
 Lost = Mapping[tuple[str, str], Quality]  # (unit, input) -> why it has no number
 
@@ -76,7 +91,7 @@ def site() -> SitePlan:
 
 @dataclass(kw_only=True)
 class WrittenStore:
-    """Writes ticks of both units; ``changes`` replace rated inputs, ``lost`` ones have no number."""
+    """Writes ticks of all units; ``changes`` replace rated inputs, ``lost`` ones have no number."""
 
     data: Path
     gas_cache: Path

@@ -58,6 +58,7 @@ def test_programs_meet_on_the_chosen_ports_and_nowhere_but_loopback(tmp_path: Pa
     assert "--pace" in wanted["plant"]
     for name in ("plant", "agent"):
         assert "field-bus=mqtt://127.0.0.1:11" in wanted[name]
+        assert "field-gateway=mqtt://127.0.0.1:11" in wanted[name]
         assert "control-system=opc.tcp://127.0.0.1:22/ostmere" in wanted[name]
 
 

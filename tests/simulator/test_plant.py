@@ -10,6 +10,7 @@ import pytest
 
 from agent.siteplan.load import load_site
 from agent.siteplan.plan import SitePlan
+from simulator.ostmere import K330
 from simulator.plant import Plant, PlantMismatchError
 from simulator.plant_main import scenario_path
 from simulator.scenario import load_scenario
@@ -127,6 +128,28 @@ def test_site_with_a_machine_this_plant_lacks_is_refused(site: SitePlan) -> None
             pace=1.0,
             seed=1,
         )
+
+
+def test_nameplate_of_the_field_machine_is_the_plants_own(site: SitePlan) -> None:
+    """The plant holds it apart from the agent's file; areas are written in cm2 with three digits."""
+    entered, built = site.unit("K-330").unit, K330
+    assert (entered.stroke_m, entered.connecting_rod_m) == pytest.approx(
+        (built.stroke_m, built.connecting_rod_m)
+    )
+    assert entered.rated_speed_rad_s == pytest.approx(built.rated_speed_rad_s)
+    assert dict(entered.composition) == pytest.approx(dict(built.composition))
+    assert [(s.word, s.held_open) for s in entered.load_steps] == [
+        (s.word, s.held_open) for s in built.load_steps
+    ]
+    for mine, theirs in zip(entered.cylinders, built.cylinders, strict=True):
+        assert (mine.number, len(mine.ends)) == (theirs.number, len(theirs.ends))
+        assert mine.bore_m == pytest.approx(theirs.bore_m)
+        assert mine.rod_diameter_m == pytest.approx(theirs.rod_diameter_m)
+        assert mine.reciprocating_mass_kg == pytest.approx(theirs.reciprocating_mass_kg)
+        for a, b in zip(mine.ends, theirs.ends, strict=True):
+            assert (a.side, a.clearance) == (b.side, pytest.approx(b.clearance))
+            assert a.suction_area_ratio == pytest.approx(b.suction_area_ratio, rel=2e-3)
+            assert a.discharge_area_ratio == pytest.approx(b.discharge_area_ratio, rel=2e-3)
 
 
 def test_pace_of_zero_is_refused(site: SitePlan) -> None:

@@ -43,6 +43,7 @@ class Processes:
 def addresses(mqtt: int, opcua: int) -> Sequence[str]:
     return (
         "--address", f"field-bus=mqtt://127.0.0.1:{mqtt}",
+        "--address", f"field-gateway=mqtt://127.0.0.1:{mqtt}",
         "--address", f"control-system=opc.tcp://127.0.0.1:{opcua}/ostmere",
     )  # fmt: skip
 

@@ -110,7 +110,7 @@ FAULTS = [
     ),
     pytest.param(
         changes("at: 20 s, unit: K-990, variable: running, to: false"),
-        "unit: 'K-990' is no machine of this plant; known: K-110, K-220",
+        "unit: 'K-990' is no machine of this plant; known: K-110, K-220, K-330",
         id="unknown unit",
     ),
     pytest.param(

@@ -173,9 +173,9 @@ def test_it_bears_itself_anew_when_asked_and_by_its_own_timer(host: Host, wire: 
     until(wire._birth_due.is_set)
     wire.publish(instant(FIRST, NOW + 1))
     assert [(t.split("/")[2], p.seq) for t, p in host.take(2)] == [("NBIRTH", 0), ("DBIRTH", 1)]
-    wire.publish(instant(FIRST, NOW + 10.9))
+    wire.publish(instant(FIRST, NOW + 5.9))
     assert host.take(1)[0][1].seq == 2
-    wire.publish(instant(FIRST, NOW + 11))  # ten seconds after the last
+    wire.publish(instant(FIRST, NOW + 6))  # five seconds after the last
     assert [(t.split("/")[2], p.seq) for t, p in host.take(2)] == [("NBIRTH", 0), ("DBIRTH", 1)]
 
 

@@ -105,6 +105,7 @@ def site(mqtt: int = 1, opcua: int = 1) -> SitePlan:
         SITE,
         addresses={
             "field-bus": f"mqtt://127.0.0.1:{mqtt}",
+            "field-gateway": f"mqtt://127.0.0.1:{mqtt}",
             "control-system": f"opc.tcp://127.0.0.1:{opcua}/ostmere",
         },
     )

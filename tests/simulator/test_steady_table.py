@@ -130,6 +130,51 @@ def test_pressures_between_stages_chain_downwards_and_coolers_lose_little() -> N
             assert 0 < loss < 0.01  # common practice: a cooler and its lines take up to a percent or two
 
 
+FIELD = MACHINES["K-330"]
+
+
+def field(step: str = "100") -> dict[str, float]:
+    return dict(FIELD.tags(replace(FIELD.rated, load_step=step)))
+
+
+# source: the same study, full load at 750 rpm: pressures bar, suction K, discharge K of each stage
+@pytest.mark.parametrize(
+    ("stage", "suction", "discharge", "ts_k", "td_k"),
+    [(1, 4.97, 12.45, 300, 370.7), (2, 12.39, 34.18, 308, 389.2)],
+)
+def test_field_machine_passes_through_the_given_points_at_full_load(
+    stage: int, suction: float, discharge: float, ts_k: float, td_k: float
+) -> None:
+    tags = field()
+    assert tags[f"stage{stage}.suction_pressure"] == pytest.approx(suction * BAR, rel=1e-9)
+    assert tags[f"stage{stage}.discharge_pressure"] == pytest.approx(discharge * BAR, rel=1e-9)
+    assert tags[f"stage{stage}.suction_temperature"] == ts_k
+    assert tags[f"stage{stage}.discharge_temperature"] == pytest.approx(td_k, abs=1e-6)
+
+
+@pytest.mark.parametrize(("step", "flow_kg_s"), [("100", 3.084), ("50", 1.48)])  # source: the same study
+def test_field_machine_gives_the_flow_of_the_study_for_each_revolution(step: str, flow_kg_s: float) -> None:
+    tags = field(step)
+    share_of_750_rpm = tags["unit.speed"] / (750 * RPM)
+    assert tags["unit.flow"] * BOOSTER_MOLAR_MASS / share_of_750_rpm == pytest.approx(flow_kg_s, rel=1e-3)
+
+
+def test_induction_motor_falls_behind_with_its_load() -> None:
+    """740 to 746 rpm of 750, by what is driven."""
+    full, half = (field(step)["unit.speed"] / RPM for step in ("100", "50"))
+    assert 740 < full < half < 746.5
+    electrical = 989e3 / MOTOR_AND_DRIVE  # source: the same study, 989 kW indicated
+    assert full == pytest.approx(750 * (1 - 0.013 * electrical / 1250e3), rel=1e-9)  # hand: 1.3 % at 1250 kW
+    standing = FIELD.tags(replace(FIELD.rated, running=False))
+    assert standing["unit.speed"] == 0.0
+
+
+def test_field_machine_chains_its_pressures_and_loses_little_in_the_cooler() -> None:
+    for step in FIELD.steps:
+        tags = field(step)
+        assert 0 < 1 - tags["stage2.suction_pressure"] / tags["stage1.discharge_pressure"] < 0.01
+
+
 @given(st.floats(18, 33), st.floats(0.1, 3))
 def test_sinking_suction_heats_the_gas_and_takes_flow(suction_bar: float, less_bar: float) -> None:
     high = booster(suction_header_pa=suction_bar * BAR)

@@ -104,6 +104,7 @@ class Wires:
     def arguments(self) -> list[str]:
         return [
             "--address", f"field-bus=mqtt://127.0.0.1:{self.mqtt_port}",
+            "--address", f"field-gateway=mqtt://127.0.0.1:{self.mqtt_port}",
             "--address", f"control-system=opc.tcp://127.0.0.1:{self.opcua_port}/ostmere",
         ]  # fmt: skip
 

@@ -89,7 +89,7 @@ def test_mistake_under_an_anchor_is_told_once(tmp_path: Path) -> None:
     path.write_text(text, encoding="utf-8")
     told = faults(path)
     assert len(told) == 1
-    assert told[0].startswith("37: units[0].stages[0].cylinders[0].bore: '195': expected a length")
+    assert told[0].startswith("43: units[0].stages[0].cylinders[0].bore: '195': expected a length")
 
 
 NOT_UTF8 = "expected text in UTF-8 (save the file again with that encoding)"
@@ -192,7 +192,7 @@ def test_demo_site_is_read_in_si(ostmere: SitePlan) -> None:
     assert (ostmere.schema, ostmere.name, ostmere.simulated) == (1, "Ostmere Works", True)
     assert ostmere.barometer_pa == pytest.approx(101300.0)  # hand
     assert str(ostmere.zone) == "Europe/Copenhagen"
-    assert [u.id for u in ostmere.units] == ["K-110", "K-220"]
+    assert [u.id for u in ostmere.units] == ["K-110", "K-220", "K-330"]
     unit = ostmere.unit("K-110").unit
     assert unit.stroke_m == pytest.approx(0.140)  # hand
     assert unit.connecting_rod_m == pytest.approx(0.360)  # hand
@@ -264,6 +264,9 @@ def test_sources_keep_what_was_entered(ostmere: SitePlan) -> None:
     assert (mqtt.kind, opcua.kind) == (SourceKind.MQTT_JSON, SourceKind.OPCUA)
     assert (mqtt.mqtt_version, mqtt.client_id) == (MqttVersion.V311, "throwline-ostmere")
     assert mqtt.topics == ("ostmere/K-110/#",)
+    sparkplug = ostmere.sources["field-gateway"]
+    assert (sparkplug.kind, sparkplug.group) == (SourceKind.MQTT_SPARKPLUG, "ostmere")
+    assert (sparkplug.mqtt_version, sparkplug.client_id) == (MqttVersion.V311, "throwline-ostmere-gateway")
     assert opcua.address == "opc.tcp://127.0.0.1:4840/ostmere"
 
 
