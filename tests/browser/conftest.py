@@ -119,7 +119,7 @@ def served(tmp_path: Path) -> Iterator[Served]:
     assert said == "", said  # nothing to complain of
 
 
-@pytest.fixture(scope="session")
+@pytest.fixture(scope="module")  # it holds this thread's event loop as long as it lives
 def chromium(tmp_path_factory: pytest.TempPathFactory) -> Iterator["sync_api.BrowserType"]:
     with sync_api.sync_playwright() as playwright:
         yield playwright.chromium
