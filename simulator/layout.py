@@ -80,7 +80,7 @@ def film_factor(cylinder: Cylinder, composition: Mapping[str, float], piston_spe
 
     References
     ----------
-    Adair, Qvale, Pearson, Purdue Compressor Conference (1972), after later transcriptions.
+    Adair, Qvale, Pearson, Purdue Compressor Conference (1972), after later authors.
     """
     viscosity, conductivity = transport(composition, _MEAN_GAS_K)
     gas = mixture(composition)

@@ -2,7 +2,7 @@
 
 One row is one published number. ``inputs`` are all the numbers it hangs on, in SI; a test moves each of them
 and requires the row to fail. The property library of our surfaces is never a source here. Text-book examples
-were read in the transcription named; the printed books were not at hand.
+were read in the secondary copy named; the printed books were not at hand.
 """
 
 import math

@@ -1,7 +1,7 @@
 """Fault signs against the published symptom table, and what the fault values refuse.
 
 Symptoms: H. P. Bloch, J. J. Hoefner, Reciprocating Compressors: Operation and Maintenance (1996), pages 304
-and 336, as summarised in later transcriptions; the rest is common practice.
+and 336, as summarised by later authors; the rest is common practice.
 """
 
 import math
