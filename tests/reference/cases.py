@@ -39,11 +39,11 @@ class Case:
 
 GAS, EFFICIENCY, HEAT, ROD, POWER = tuple(Topic)
 
-BOOKS = "transcribed in FOSSEE Python-Textbook-Companions"
+BOOKS = "copied in FOSSEE Python-Textbook-Companions"
 NIST = "NIST, AGA8 repository (github.com/usnistgov/AGA8)"
 NIST_TEST = f"{NIST}, test of GERG-2008, 21 components"
 NIST_TABLE = f"{NIST}, Tables.xls, reference gases by GERG-2008"
-ISO = "ISO 20765-2, example points, transcribed in Tables.xls of the NIST AGA8 repository"
+ISO = "ISO 20765-2, example points, copied in Tables.xls of the NIST AGA8 repository"
 JOEL = f"R. Joel, Basic Engineering Thermodynamics, {BOOKS}"
 SINGH = f"O. Singh, Applied Thermodynamics, {BOOKS}"
 NAG = f"P. K. Nag, Basic and Applied Thermodynamics, {BOOKS}"
