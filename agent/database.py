@@ -20,6 +20,11 @@ from importlib.resources import files
 from pathlib import Path
 from typing import Final
 
+# What lies in a data folder.
+SERIES_FILE: Final = "series.db"
+JOURNAL_FILE: Final = "journal.db"
+CACHE_FOLDER: Final = "cache"  # of gas surfaces
+
 BUSY_TIMEOUT_S: Final = 5.0
 # Frames of some hundred columns waste least of a page of this size. It can only be set on an empty file.
 _PAGE_SIZE: Final = 8192

@@ -47,6 +47,7 @@ SETTLE_S: Final = 0.5  # a tick is judged this long after it, so that readings o
 REPLAY_S: Final = 120  # rows a crash left unjudged are judged at start if they are no older than this
 BACKLOG_TICKS: Final = 600  # kept in memory while the store refuses to write
 PRUNE_EVERY_S: Final = 60
+STEP_BACK_S: Final = 1  # a clock that is disciplined moves by less
 
 
 @dataclass(slots=True)
@@ -113,6 +114,7 @@ class Pipeline:
         self._store_trouble = ""
         self.refused_late = 0
         self.clock_steps_back = 0
+        self._waits_for_clock = False
 
     # -- start ---------------------------------------------------------------------------------------------
 
@@ -190,7 +192,9 @@ class Pipeline:
                 refused += change.refused
         if not self._write(Commit(frames=frames, derived=rows, sources=())):
             return ()
-        self.refused_late += refused
+        if refused:
+            self.refused_late += refused
+            _log.warning("%d late readings were too old to be stored, %d in all", refused, self.refused_late)
         for line in self._lines.values():
             line.late.clear()
         receipts, self._late_receipts = tuple(self._late_receipts), []
@@ -202,12 +206,21 @@ class Pipeline:
         """When the next tick may be judged, unix seconds."""
         return self._last_tick + 1 + SETTLE_S
 
+    def watch_clock(self, now: float) -> None:
+        """Tell, once each time, that the clock was set back: no tick is judged twice, so the agent waits."""
+        behind = self._last_tick - _due(now)
+        if behind > STEP_BACK_S and not self._waits_for_clock:
+            self._waits_for_clock = True
+            self.clock_steps_back += 1
+            _log.warning("the clock was set back by %d s: no new tick until it has caught up", behind)
+        elif behind <= 0 and self._waits_for_clock:
+            self._waits_for_clock = False
+            _log.warning("the clock has caught up; live again")
+
     def tick(self, now: float, sources: Sequence[SourceStatus]) -> tuple[Receipt, ...]:
         """Judge every second that is due; returns what may now be acknowledged."""
         self._skip_long_pause(now)
         due = _due(now)
-        if due < self._last_tick - 1:
-            self._tell_step_back(self._last_tick - due)
         ticks = range(self._last_tick + 1, due + 1)
         if not ticks:
             return ()
@@ -306,11 +319,6 @@ class Pipeline:
         if not trouble and self._store_trouble:
             _log.warning("store writes again")
         self._store_trouble = trouble
-
-    def _tell_step_back(self, seconds: int) -> None:
-        self.clock_steps_back += 1
-        if self.clock_steps_back == 1 or seconds % 60 == 0:
-            _log.warning("the clock stands %d s before the last tick; waiting", seconds)
 
 
 def _due(now: float) -> int:

@@ -13,7 +13,7 @@ from typing import Final
 from agent.acquisition.build import build_source
 from agent.acquisition.source import PlantSource
 from agent.clock import Clock, SystemClock
-from agent.database import StoreError
+from agent.database import CACHE_FOLDER, JOURNAL_FILE, SERIES_FILE, StoreError
 from agent.journal.sqlite import JournalReader, JournalWriter
 from agent.lock import FolderInUseError, only_agent
 from agent.pipeline import Pipeline, input_columns, result_columns
@@ -26,9 +26,6 @@ from model.surface import GasSurface
 
 _log = logging.getLogger(__name__)
 
-SERIES_FILE: Final = "series.db"
-JOURNAL_FILE: Final = "journal.db"
-CACHE_FOLDER: Final = "cache"
 INBOX_BATCHES: Final = 1000  # a full inbox stops the pumps; the sources then drop their oldest and count it
 LATE_WAIT_S: Final = 0.05  # late readings gather this long before they are committed together
 
@@ -133,10 +130,11 @@ class _Work:
         while not self._stop.is_set():
             await self._take_readings()
             now = self._clock.now()
+            self._pipeline.watch_clock(now)
             if self._pipeline.late_waiting:
                 self._acknowledge(await asyncio.to_thread(self._pipeline.commit_late))
             if now >= self._pipeline.next_due():
-                statuses = [s.status(now) for s in self._sources.values()]
+                statuses = [s.status() for s in self._sources.values()]
                 self._acknowledge(await asyncio.to_thread(self._pipeline.tick, now, statuses))
 
     async def _take_readings(self) -> None:

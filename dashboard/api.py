@@ -9,12 +9,12 @@ from flask import Blueprint, Response, jsonify, request
 
 from agent.alarms.catalogue import CATALOGUE
 from agent.clock import Clock
-from agent.database import StoreError
+from agent.database import JOURNAL_FILE, StoreError
 from agent.journal.sqlite import RequestWriter
 from agent.records import EventKind, Request
 from agent.siteplan.plan import SitePlan
 from dashboard.access import denied
-from dashboard.curves import Asked, CurveBook, find_cylinder
+from dashboard.curves import Asked, CurveBook
 from dashboard.live import STALE_AFTER_S, Blob, LiveFeed
 
 LONGEST_NAME: Final = 60
@@ -38,7 +38,7 @@ class Doors:
 
 def blueprint(doors: Doors) -> Blueprint:
     api = Blueprint("api", __name__)
-    requests = RequestWriter(doors.data / "journal.db")
+    requests = RequestWriter(doors.data / JOURNAL_FILE)
 
     @api.get("/api/live")
     def live() -> Response:
@@ -105,8 +105,9 @@ def _curves(doors: Doors, unit_id: str, number: int) -> Response:
     if stored is None or unit_id not in {p.id for p in stored.units}:
         return denied(409, "The site file that computed this row cannot be read any more.")
     plan = stored.unit(unit_id)
-    found = find_cylinder(plan, number)
-    if found is None:
+    try:
+        found = plan.unit.cylinder(number)
+    except KeyError:
         return denied(404, "There is no such cylinder.")
     stage, cylinder = found
     asked = Asked(plan=plan, stage=stage, cylinder=cylinder, row=row, barometer_pa=stored.barometer_pa)

@@ -8,6 +8,7 @@ from typing import Any
 
 import numpy as np
 
+from agent.database import CACHE_FOLDER
 from agent.siteplan.plan import SitePlan, UnitPlan
 from dashboard.figures.look import Drawing
 from dashboard.figures.pin_load import PinLoadCurves, pin_load_figure
@@ -35,20 +36,12 @@ class Asked:
     barometer_pa: float
 
 
-def find_cylinder(plan: UnitPlan, number: int) -> tuple[Stage, Cylinder] | None:
-    for stage in plan.unit.stages:
-        for cylinder in stage.cylinders:
-            if cylinder.number == number:
-                return stage, cylinder
-    return None
-
-
 class CurveBook:
     """Remembers gas surfaces and the newest answers; one evaluation serves every viewer of that cylinder."""
 
     def __init__(self, site: SitePlan, data: Path) -> None:
         self._site = site
-        self._cache = data / "cache"
+        self._cache = data / CACHE_FOLDER
         self._lock = threading.Lock()
         self._surfaces: dict[str, GasSurface] = {}
         self._answers: dict[tuple[str, int], tuple[int, Blob]] = {}

@@ -11,7 +11,7 @@ from pathlib import Path
 from typing import Any, Final
 
 from agent.clock import Clock
-from agent.database import StoreError, StoreMissingError
+from agent.database import JOURNAL_FILE, SERIES_FILE, StoreError, StoreMissingError
 from agent.journal.sqlite import JournalReader
 from agent.records import AlarmEvent, LinkState, SourceStatus
 from agent.siteplan.plan import SitePlan, UnitPlan
@@ -71,8 +71,8 @@ class LiveFeed:
         self._site = site
         self._clock = clock
         self._pages_version = pages_version
-        self._series = SeriesReader(data / "series.db")
-        self._journal = JournalReader(data / "journal.db")
+        self._series = SeriesReader(data / SERIES_FILE)
+        self._journal = JournalReader(data / JOURNAL_FILE)
         self.sites = StoredSites(site, self._series)
         self._build_lock = threading.Lock()
         self._stop = threading.Event()
@@ -153,10 +153,13 @@ class LiveFeed:
         return round(due_ms) if 0 < due_ms <= PERIOD_S * 1000 + _MARGIN_MS else _OVERDUE_MS
 
     def ages(self) -> dict[str, float | None]:
-        """Age of each unit's newest row in seconds; None where there is none."""
+        """Age of each unit's newest row in seconds; None where there is none.
+
+        A row ahead of the clock (which was set back) counts as old by as much: nothing newer comes before.
+        """
         self._ready()
         now = self._clock.now()
-        return {u: None if m.row is None else now - m.row.tick for u, m in self._units.items()}
+        return {u: None if m.row is None else abs(now - m.row.tick) for u, m in self._units.items()}
 
     # --- building ------------------------------------------------------------------------------------------
 

@@ -9,7 +9,7 @@ from model.corrections import Corrections
 from model.cycle import end_geometry, end_pressure
 from model.errors import NotEvaluatedError
 from model.evaluate import stage_inputs
-from model.machine import Cylinder, Side, Stage, Unit
+from model.machine import Side, Stage, Unit
 from model.measured import Measured
 from model.rodload import NO_LOAD_SHARE, positive_intervals
 from model.stage import StageState, held_open, run_stage, stage_frame
@@ -87,7 +87,7 @@ def curves(
     ----------
     See the formulas: `model.cycle`, `model.rodload`, `model.kinematics`.
     """
-    stage, cylinder = _find(unit, cylinder_number)
+    stage, cylinder = unit.cylinder(cylinder_number)
     state = _state(unit, stage, measured)
     frame, _ = stage_frame(unit, gas, corrections, state)
     open_ends = held_open(unit, cylinder, state.load_step)
@@ -117,14 +117,6 @@ def curves(
         inertia_load_n=inertia[0], pin_load_n=pin, tension_intervals=pulled, compression_intervals=pushed,
         reversal_intervals=minor, peaks=peaks,
     )  # fmt: skip
-
-
-def _find(unit: Unit, cylinder_number: int) -> tuple[Stage, Cylinder]:
-    for stage in unit.stages:
-        for cylinder in stage.cylinders:
-            if cylinder.number == cylinder_number:
-                return stage, cylinder
-    raise KeyError(cylinder_number)
 
 
 def _state(unit: Unit, stage: Stage, measured: Measured) -> StageState:

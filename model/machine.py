@@ -123,6 +123,14 @@ class Unit:
     def cylinders(self) -> tuple[Cylinder, ...]:
         return tuple(c for s in self.stages for c in s.cylinders)
 
+    def cylinder(self, number: int) -> tuple[Stage, Cylinder]:
+        """A cylinder and the stage it belongs to; KeyError if the unit has none of that number."""
+        for stage in self.stages:
+            for cylinder in stage.cylinders:
+                if cylinder.number == number:
+                    return stage, cylinder
+        raise KeyError(number)
+
     def limit(self, subject: str, quantity: str) -> Limit | None:
         for entry in self.limits:
             if entry.subject == subject and entry.quantity == quantity:

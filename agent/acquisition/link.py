@@ -73,8 +73,8 @@ class ReconnectingSource(abc.ABC):
     def acknowledge(self, receipts: Iterable[Receipt]) -> None:
         """Tell the plant that these messages are committed."""
 
-    def status(self, now: float) -> SourceStatus:
-        notes = self._notes(now)
+    def status(self) -> SourceStatus:
+        notes = self._notes()
         return SourceStatus(
             source=self.name,
             state=self._state,
@@ -94,9 +94,8 @@ class ReconnectingSource(abc.ABC):
     async def _attempt(self, number: int) -> None:
         """One connection, from nothing to its end; ``number`` counts attempts from 1."""
 
-    def _notes(self, now: float) -> tuple[str, ...]:
+    def _notes(self) -> tuple[str, ...]:
         """What else a reader of the status should know."""
-        del now
         return ()
 
     def _mark_up(self, detail: str) -> None:

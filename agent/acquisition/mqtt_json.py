@@ -43,8 +43,7 @@ class MqttJsonSource(MqttSource[_Parcel]):
             if link is not None and receipt.source == self.name and receipt.connection == link.number:
                 link.settle(receipt.message)
 
-    def _notes(self, now: float) -> tuple[str, ...]:
-        del now
+    def _notes(self) -> tuple[str, ...]:
         notes = []
         if not self._is_v5 and self._link is not None and len(self._link.waiting) >= BROKER_WINDOW:
             notes.append(

@@ -33,8 +33,7 @@ class MqttSparkplugSource(MqttSource[_Parcel]):
     def acknowledge(self, receipts: Iterable[Receipt]) -> None:
         """Nothing to do: readings carry no receipts."""
 
-    def _notes(self, now: float) -> tuple[str, ...]:
-        del now
+    def _notes(self) -> tuple[str, ...]:
         states = self._nodes.states().items()
         return tuple(f"edge node {n}: {s.value}" for n, s in states if s is not NodeState.ALIVE)
 

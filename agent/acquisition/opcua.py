@@ -60,8 +60,7 @@ class OpcUaSource(ReconnectingSource):
     def acknowledge(self, receipts: Iterable[Receipt]) -> None:
         """Nothing to do: the server keeps nothing for us, and readings carry no receipts."""
 
-    def _notes(self, now: float) -> tuple[str, ...]:
-        del now
+    def _notes(self) -> tuple[str, ...]:
         return (f"not there: {', '.join(self._missing)}",) if self._missing else ()
 
     async def _attempt(self, number: int) -> None:

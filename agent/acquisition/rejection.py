@@ -4,10 +4,7 @@ import math
 from dataclasses import dataclass
 from typing import Final
 
-from agent.siteplan.plan import Input
-
-WORD: Final = "word"  # the unit, in a site file, of an input that sends words
-SWITCH: Final = "switch"
+from agent.siteplan.plan import SWITCH, WORD, Input
 
 FUTURE_LIMIT_S: Final = 10.0
 PAST_LIMIT_S: Final = 7 * 86400.0

@@ -5,10 +5,7 @@ import math
 import numpy as np
 
 from agent.records import Quality, Reading
-from agent.siteplan.plan import Input, UnitPlan
-
-WORD = "word"  # the unit, in a site file, of an input that sends words
-SWITCH = "switch"
+from agent.siteplan.plan import SWITCH, WORD, Input, UnitPlan
 
 SPAN_TOLERANCE = 0.02  # share of the span; beyond it a transmitter is broken, not precise
 

@@ -7,7 +7,7 @@ from dataclasses import dataclass, field
 from typing import Final
 
 from agent.siteplan.document import Place
-from agent.siteplan.plan import FlowReference, Input, Source, SourceKind
+from agent.siteplan.plan import SWITCH, WORD, FlowReference, Input, Source, SourceKind
 from agent.siteplan.reader import Reader, closest
 from agent.siteplan.schema import FlowReferenceBlock, InputBlock
 from agent.siteplan.sources import covers
@@ -17,7 +17,7 @@ from model.quantities import QUANTITIES, Kind, Quantity, Scope, series_name
 
 _MEASURED: Final = tuple(q.key for q in QUANTITIES.values() if q.kind is Kind.MEASURED)
 _NEEDED: Final = ("suction_pressure", "discharge_pressure", "suction_temperature")
-_STATE_UNITS: Final = {"load_step": "word", "run_signal": "switch"}
+_STATE_UNITS: Final = {"load_step": WORD, "run_signal": SWITCH}
 _DIFFERENCES: Final = {"pressure": "pressure_difference", "temperature": "temperature_difference"}
 _NODE_ID: Final = re.compile(r"((nsu=[^;]+|ns=\d+);)?(i=\d+|s=.+|g=[0-9A-Fa-f-]{36}|b=.+)")
 _METRIC: Final = re.compile(r"[^+/#]+/[^+/#]*/.+")

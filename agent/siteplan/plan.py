@@ -3,10 +3,15 @@
 from collections.abc import Mapping
 from dataclasses import dataclass
 from enum import StrEnum
+from typing import Final
 from zoneinfo import ZoneInfo
 
 from model.machine import Unit
 from model.quantities import QUANTITIES, UNCERTAINTY_SUFFIX, Kind, Scope, series_name
+
+# Units, in a site file, of inputs that send no number.
+WORD: Final = "word"
+SWITCH: Final = "switch"
 
 
 class SourceKind(StrEnum):

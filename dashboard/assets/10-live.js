@@ -134,9 +134,10 @@ window.throwline = (() => {
     return serverNow === null ? null : serverNow + (performance.now() - heardAt) / 1000;
   }
 
+  /* Data ahead of the server's clock (which was set back) is as old as it is ahead: the agent waits until then. */
   function age(tick) {
     const at = now();
-    return at === null || tick === null || tick === undefined ? null : Math.max(0, at - tick);
+    return at === null || tick === null || tick === undefined ? null : Math.abs(at - tick);
   }
 
   function duration(seconds) {

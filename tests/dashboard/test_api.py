@@ -148,6 +148,16 @@ def test_health_follows_the_age_of_the_data(
     assert answer.get_json()["data_age_s"]["K-220"] == pytest.approx(5.1)
 
 
+def test_a_clock_that_was_set_back_does_not_make_old_data_fresh(
+    client: FlaskClient, store: WrittenStore, clock: HandClock
+) -> None:
+    store.ticks(NOON)
+    clock.step(-3600)
+    answer = client.get("/healthz")
+    assert answer.status_code == 503
+    assert answer.get_json()["data_age_s"]["K-110"] == pytest.approx(3599.4, abs=1)
+
+
 @pytest.mark.parametrize(("unit", "cylinder"), [("K-110", 2), ("K-220", 1), ("K-220", 4)])
 @pytest.mark.parametrize("step", [0.0, 1.0])
 def test_drawn_extremes_are_the_stored_peaks(

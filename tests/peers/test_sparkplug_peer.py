@@ -157,7 +157,7 @@ def test_our_source_reads_what_the_peer_sends(port: int, start_peer: Any) -> Non
         peer = await asyncio.to_thread(start_peer, "sparkplug.mjs", str(port), "none")
         async with source:
             async with asyncio.timeout(30):
-                while source.status(0.0).connections == 0:  # noqa: ASYNC110 - a status has no event
+                while source.status().connections == 0:  # noqa: ASYNC110 - a status has no event
                     await asyncio.sleep(0.01)
                 for place, payload in messages:
                     peer.tell({"topic": f"spBv1.0/g/{place}", "payload": {"timestamp": at} | payload})
@@ -166,7 +166,7 @@ def test_our_source_reads_what_the_peer_sends(port: int, start_peer: Any) -> Non
                     readings.extend(batch)
                     if len(readings) >= 2 * len(KINDS) + 3:
                         break
-        assert source.status(0.0).rejected == 0, source.status(0.0).last_rejection
+        assert source.status().rejected == 0, source.status().last_rejection
 
     asyncio.run(scenario())
     born = {r.address.rpartition("/")[2]: r for r in readings[: len(KINDS)]}

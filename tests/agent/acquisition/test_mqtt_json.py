@@ -26,7 +26,7 @@ def receipts(readings: list[Reading]) -> list[Any]:
 
 
 def is_up(heard: Any) -> bool:
-    return heard.source.status(time.time()).state is LinkState.UP
+    return heard.source.status().state is LinkState.UP
 
 
 @pytest.fixture
@@ -103,8 +103,8 @@ def test_rejected_messages_and_foreign_topics_are_acknowledged_at_once(
             for _ in range(30):  # more than the broker's window of 20
                 plant.send_raw("PT", b"garbage")
                 plant.send_raw("elsewhere", b"whatever")
-            await until(lambda: heard.source.status(time.time()).rejected == 30, "all rejected")
-            assert heard.source.status(time.time()).last_rejection == "site/PT: the payload is not JSON"
+            await until(lambda: heard.source.status().rejected == 30, "all rejected")
+            assert heard.source.status().last_rejection == "site/PT: the payload is not JSON"
             plant.send("PT", 1.0, time.time())
             await until(lambda: heard.readings, "and a good one")
 
@@ -177,7 +177,7 @@ def test_version_5_lets_many_messages_wait_and_311_says_when_its_window_is_full(
             await until(lambda: is_up(heard), "up")
             for n in range(50):
                 plant.send("PT", float(n), time.time())
-            await until(lambda: "wait for a commit" in heard.source.status(time.time()).detail, "it says so")
+            await until(lambda: "wait for a commit" in heard.source.status().detail, "it says so")
             assert len(heard.readings) == 20  # Mosquitto's default window
             while len(heard.readings) < 50:
                 heard.source.acknowledge(receipts(heard.readings))
@@ -234,7 +234,7 @@ def test_a_reading_dated_ahead_does_not_hold_a_place_in_the_window(
                 amqtt_plant.send("PT", float(n), time.time() + 5.0)
             await until(lambda: len(heard.readings) == 40, "all, none acknowledged by the pipeline")
             assert {r.receipt for r in heard.readings} == {None}
-            assert "40 readings dated ahead" in heard.source.status(time.time()).detail
+            assert "40 readings dated ahead" in heard.source.status().detail
 
     asyncio.run(scenario())
 
@@ -247,9 +247,9 @@ def test_a_broker_of_another_version_is_told_and_not_spoken_to_in_an_older_one(
 
     async def scenario() -> None:
         async with listening(amqtt_plant.source(tag)) as heard:
-            await until(lambda: heard.source.status(0.0).state is LinkState.DOWN, "down")
-            assert re.search("does not answer to MQTT 5|refused", heard.source.status(time.time()).detail)
-            assert heard.source.status(time.time()).connections == 0
+            await until(lambda: heard.source.status().state is LinkState.DOWN, "down")
+            assert re.search("does not answer to MQTT 5|refused", heard.source.status().detail)
+            assert heard.source.status().connections == 0
 
     asyncio.run(scenario())
 
@@ -294,7 +294,7 @@ def test_a_refusal_of_the_broker_is_told(
             SystemClock(),
         )
         async with listening(source) as heard:
-            await until(lambda: heard.source.status(0.0).state is LinkState.DOWN, "down")
-            assert "refused the connection: Not authorized" in heard.source.status(time.time()).detail
+            await until(lambda: heard.source.status().state is LinkState.DOWN, "down")
+            assert "refused the connection: Not authorized" in heard.source.status().detail
 
     asyncio.run(scenario())

@@ -52,7 +52,7 @@ def instant(tags: tuple[Input, ...], *values: Any, at: float | None = None) -> l
 
 
 def is_up(heard: Any) -> bool:
-    return heard.source.status(time.time()).state is LinkState.UP
+    return heard.source.status().state is LinkState.UP
 
 
 @contextmanager
@@ -79,7 +79,7 @@ def test_what_the_edge_node_sends_is_read(
     async def scenario() -> None:
         async with listening(source(port, tags, version)) as heard:
             await until(lambda: is_up(heard), "up")
-            assert "edge node gw: no birth since we listen" in heard.source.status(time.time()).detail
+            assert "edge node gw: no birth since we listen" in heard.source.status().detail
             start = round(time.time() - 2, 3)
             with gateway(port, tags) as wire:
                 wire.publish(instant(tags, 20.25, "100", True, 1e-3, at=start))
@@ -94,13 +94,13 @@ def test_what_the_edge_node_sends_is_read(
                     ("gw/K/UY", start + 1, None, "50", Quality.GOOD),
                     ("gw/K/FT", start + 1, None, None, Quality.BAD),  # null; the switch has not changed
                 ]
-                assert "edge node" not in heard.source.status(time.time()).detail
+                assert "edge node" not in heard.source.status().detail
                 assert {r.receipt for r in heard.readings} == {None}
                 heard.source.acknowledge([])
             await until(lambda: len(heard.readings) == 11, "it took its leave: all four bad")
             assert {r.quality for r in heard.readings[7:]} == {Quality.BAD}
-            assert "edge node gw: dead" in heard.source.status(time.time()).detail
-            assert heard.source.status(time.time()).rejected == 0
+            assert "edge node gw: dead" in heard.source.status().detail
+            assert heard.source.status().rejected == 0
 
     asyncio.run(scenario())
 
@@ -180,14 +180,14 @@ def test_a_gap_is_bad_until_the_next_birth_and_the_agent_says_nothing(
             voice.say(topic(MessageType.DEVICE_DATA), lost)
             voice.say("spBv1.0/g/DDATA/gw/K", b"garbage")
             voice.say("spBv1.0/g/nonsense", b"")
-            await until(lambda: heard.source.status(0.0).rejected == 3, "all three are refused")
-            assert heard.source.status(0.0).last_rejection == (
+            await until(lambda: heard.source.status().rejected == 3, "all three are refused")
+            assert heard.source.status().last_rejection == (
                 "spBv1.0/g/nonsense: no topic of an edge node or device"
             )
             await until(lambda: len(heard.readings) == 2, "the value and its mark")
             assert [r.value for r in heard.readings] == [-5.0, None]
             assert [r.quality for r in heard.readings] == [Quality.GOOD, Quality.BAD]
-            assert "waits for its next birth" in heard.source.status(0.0).detail
+            assert "waits for its next birth" in heard.source.status().detail
             for message in births(time.time(), seq=254):
                 voice.say(*message)
             when = round(time.time() * 1000)
@@ -214,8 +214,8 @@ def test_a_retained_message_is_not_believed(
 
     async def scenario() -> None:
         async with listening(source(port, (tag,))) as heard:
-            await until(lambda: heard.source.status(0.0).rejected == 2, "both are refused")
-            assert "retained" in heard.source.status(0.0).last_rejection
+            await until(lambda: heard.source.status().rejected == 2, "both are refused")
+            assert "retained" in heard.source.status().last_rejection
             assert heard.readings == []
 
     asyncio.run(scenario())

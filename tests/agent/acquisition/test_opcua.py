@@ -21,7 +21,7 @@ MOMENT = datetime(2026, 1, 1, tzinfo=UTC)
 
 
 def state(source: Any) -> LinkState:
-    return source.status(time.time()).state
+    return source.status().state
 
 
 @pytest.fixture
@@ -149,7 +149,7 @@ def test_a_silent_server_is_noticed_and_found_again(
             await until(lambda: state(heard.source) is LinkState.UP, "up")
             opcua_plant.child.signal(signal.SIGSTOP)
             await until(lambda: state(heard.source) is LinkState.DOWN, "silence is noticed", 6.0)
-            assert "silent" in heard.source.status(0.0).detail
+            assert "silent" in heard.source.status().detail
             opcua_plant.child.signal(signal.SIGCONT)
             await until(lambda: state(heard.source) is LinkState.UP, "up again", 30.0)
             opcua_plant.send("PT", 7.0, time.time())
@@ -167,7 +167,7 @@ def test_missing_nodes_are_named_while_the_others_go_on(
     async def scenario() -> None:
         async with listening(opcua_plant.source(gone, tag, elsewhere)) as heard:
             await until(lambda: state(heard.source) is LinkState.UP, "up")
-            detail = heard.source.status(0.0).detail
+            detail = heard.source.status().detail
             assert "PT-8 (unknown namespace)" in detail
             assert "PT-9 (BadNodeIdUnknown)" in detail
             opcua_plant.send("PT", 7.0, time.time())
@@ -184,7 +184,7 @@ def test_a_server_with_none_of_the_nodes_is_up_and_says_so(
     async def scenario() -> None:
         async with listening(opcua_plant.source(gone)) as heard:
             await until(lambda: state(heard.source) is LinkState.UP, "up")
-            assert "PT-9 (unknown namespace)" in heard.source.status(0.0).detail
+            assert "PT-9 (unknown namespace)" in heard.source.status().detail
 
     asyncio.run(scenario())
 

@@ -14,7 +14,7 @@ from agent.siteplan.plan import Input
 
 
 def state(source: Any) -> LinkState:
-    return source.status(time.time()).state
+    return source.status().state
 
 
 @pytest.fixture
@@ -45,7 +45,7 @@ def test_values_arrive_with_their_source_time_and_quality(
             assert [r.source_time for r in readings] == pytest.approx([now, now + 0.25, now + 0.5], abs=1e-5)
             assert {r.address for r in readings} == {plant.address("PT")}
             assert all(r.source == "plant" and r.word is None for r in readings)
-            status = heard.source.status(time.time())
+            status = heard.source.status()
             assert status.rejected == status.dropped == 0
             assert -1.0 < status.clock_offset_s < 5.0
 
@@ -79,11 +79,11 @@ def test_garbage_never_becomes_a_number_and_is_counted(
             bad = [("PT", float("nan")), ("PT", "20.5"), ("PT", True), ("XS", 2), ("XS", "true"), ("UY", "")]
             for n, (tag, value) in enumerate(bad, start=1):
                 plant.send(tag, value, now + n / 100)
-                await until(lambda n=n: source.status(now).rejected >= n, f"rejection {n}")
+                await until(lambda n=n: source.status().rejected >= n, f"rejection {n}")
             plant.send("PT", 21.0, now + 30)
-            await until(lambda: source.status(now).rejected > len(bad), "the one of the future is rejected")
-            assert "future" in source.status(now).last_rejection
-            assert plant.address("PT") in source.status(now).last_rejection
+            await until(lambda: source.status().rejected > len(bad), "the one of the future is rejected")
+            assert "future" in source.status().last_rejection
+            assert plant.address("PT") in source.status().last_rejection
             plant.send("PT", 22.0, time.time())
             await until(lambda: 22.0 in heard.values("PT"), "a good one after all that")
             assert [r for r in heard.readings if r.quality.usable] == [heard.readings[-1]]
@@ -104,7 +104,7 @@ def test_a_killed_plant_is_noticed_and_found_again(
                 await asyncio.to_thread(plant.kill)
                 await until(lambda: state(source) is LinkState.DOWN, "the loss is noticed", 6.0)
                 await asyncio.to_thread(plant.start)
-            await until(lambda: source.status(time.time()).connections == 3, "the third connection")
+            await until(lambda: source.status().connections == 3, "the third connection")
             plant.send("PT", 23.0, time.time())
             await until(lambda: 23.0 in heard.values("PT"), "a value again")
 
@@ -122,7 +122,7 @@ def test_a_plant_that_is_not_there_yet_is_waited_for_and_each_change_of_state_is
             source = heard.source
             assert state(source) is LinkState.CONNECTING
             await until(lambda: state(source) is LinkState.DOWN, "it says so")
-            assert "no connection to" in source.status(time.time()).detail
+            assert "no connection to" in source.status().detail
             await asyncio.sleep(2.0)  # several attempts, one line
             await asyncio.to_thread(plant.start)
             await until(lambda: state(source) is LinkState.UP, "it comes up by itself")
