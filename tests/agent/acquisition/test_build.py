@@ -24,7 +24,7 @@ def build(inputs: tuple[Input, ...] = (), **changes: object) -> object:
 
 
 def test_a_source_that_is_not_opened_is_connecting() -> None:
-    status = build().status(60.0)  # type: ignore[attr-defined]
+    status = build().status()  # type: ignore[attr-defined]
     assert (status.source, status.state, status.since) == ("plant", LinkState.CONNECTING, 50.0)
     assert (status.received, status.rejected, status.dropped, status.connections) == (0, 0, 0, 0)
 
