@@ -1,4 +1,4 @@
-"""What can be wrong between a true value and the agent: with the instrument, or with the link of its source."""
+"""What can be wrong between a true value and the agent: in the instrument, or on the link of its source."""
 
 from dataclasses import dataclass
 from enum import StrEnum

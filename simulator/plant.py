@@ -1,12 +1,13 @@
 """The invented plant: scenario, machines and instruments, sampled on demand. No wire and no clock in here."""
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from types import MappingProxyType
 from typing import Final
 
 from agent.siteplan.plan import Input, SitePlan
 from simulator.instruments import HeaderSwing, Instrument, rounded
+from simulator.sample import Sample
 from simulator.scenario import Scenario
 from simulator.steady_table import Conditions, Machine
 
@@ -15,15 +16,6 @@ _SWING: Final = MappingProxyType({"suction": 0.003, "discharge": 0.0015})  # sha
 
 class PlantMismatchError(ValueError):
     """The site file asks for something this plant does not have."""
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Sample:
-    """One tag at one instant, in the plant's unit."""
-
-    tag: Input
-    time: float  # unix seconds, UTC
-    value: float | bool | str | None  # None: the instrument gives none
 
 
 class Plant:

@@ -16,7 +16,8 @@ from pathlib import Path
 from agent.siteplan.errors import SiteFileError
 from agent.siteplan.load import load_site
 from agent.siteplan.plan import SitePlan, Source, SourceKind
-from simulator.plant import Plant, PlantMismatchError, Sample
+from simulator.plant import Plant, PlantMismatchError
+from simulator.sample import Sample
 from simulator.scenario import Scenario, ScenarioError, load_scenario
 from simulator.serve_mqtt import MqttWire
 from simulator.serve_opcua import OpcuaWire

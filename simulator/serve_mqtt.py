@@ -17,7 +17,7 @@ from paho.mqtt.enums import CallbackAPIVersion, MQTTErrorCode, MQTTProtocolVersi
 from paho.mqtt.properties import Properties
 from paho.mqtt.reasoncodes import ReasonCode
 
-from simulator.plant import Sample
+from simulator.sample import Sample
 
 CLIENT_ID = "ostmere-field-bus"
 KEPT_S = 600  # what is kept while the broker is away; the newest messages are refused after that

@@ -12,7 +12,7 @@ from asyncua.common.node import Node
 
 from agent.siteplan.plan import Input, UnitPlan
 from simulator.opcua_history import HourOfHistory
-from simulator.plant import Sample
+from simulator.sample import Sample
 
 NAMESPACE: Final = "urn:ostmere:plant"
 LOOPBACK: Final = frozenset({"127.0.0.1", "localhost", "::1"})

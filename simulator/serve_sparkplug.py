@@ -36,7 +36,7 @@ from agent.sparkplug.wire import (
     Topic,
     parsed,
 )
-from simulator.plant import Sample
+from simulator.sample import Sample
 
 CLIENT_ID = "ostmere-field-gateway"
 KEPT_S = 600  # samples kept while the broker is away; the oldest go after that

@@ -8,8 +8,9 @@ import numpy as np
 import pytest
 
 from agent.siteplan.load import load_site
-from simulator.plant import Plant, Sample
+from simulator.plant import Plant
 from simulator.plant_main import scenario_path
+from simulator.sample import Sample
 from simulator.scenario import load_scenario
 from simulator.serve_opcua import NAMESPACE, OpcuaWire
 from simulator.steady_table import MACHINES

@@ -20,7 +20,7 @@ from agent.clock import SystemClock
 from agent.records import Quality, Reading
 from agent.siteplan.load import load_site
 from agent.siteplan.plan import Input, MqttVersion, Source, SourceKind
-from simulator.plant import Sample
+from simulator.sample import Sample
 from simulator.serve_sparkplug import SparkplugWire
 
 pytestmark = pytest.mark.peers

@@ -17,7 +17,7 @@ from paho.mqtt.enums import CallbackAPIVersion
 from agent.siteplan.load import load_site
 from agent.siteplan.plan import Input
 from agent.sparkplug.wire import DataType, Metric, Payload
-from simulator.plant import Sample
+from simulator.sample import Sample
 from simulator.serve_sparkplug import SparkplugWire, data_type, put_value
 
 ROOT = Path(__file__).resolve().parents[2]

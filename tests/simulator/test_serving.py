@@ -24,8 +24,9 @@ from paho.mqtt.enums import CallbackAPIVersion
 from agent.siteplan.load import load_site
 from agent.siteplan.plan import SitePlan
 from simulator.opcua_history import Ring
-from simulator.plant import Plant, Sample
+from simulator.plant import Plant
 from simulator.plant_main import scenario_path
+from simulator.sample import Sample
 from simulator.scenario import load_scenario
 from simulator.serve_mqtt import MqttWire, payload
 from simulator.serve_opcua import NAMESPACE, OpcuaWire, unit_id

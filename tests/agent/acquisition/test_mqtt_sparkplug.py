@@ -17,7 +17,7 @@ from agent.clock import HandClock, SystemClock
 from agent.records import LinkState, Quality
 from agent.siteplan.plan import Input, MqttVersion, Source, SourceKind
 from agent.sparkplug.wire import DataType, MessageType, Metric, Payload, Topic
-from simulator.plant import Sample
+from simulator.sample import Sample
 from simulator.serve_sparkplug import SparkplugWire
 
 MakeInput = Callable[..., Input]
