@@ -3,6 +3,9 @@
 from dataclasses import dataclass
 from enum import StrEnum
 
+import numpy as np
+from numpy.typing import NDArray
+
 
 class InstrumentFaultKind(StrEnum):
     """What an instrument does wrong."""
@@ -29,6 +32,14 @@ class InstrumentFault:
     @property
     def present(self) -> bool:
         return self.size != (1.0 if self.kind is InstrumentFaultKind.WRONG_SPAN else 0.0)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class FaultTrack:
+    """One fault of one instrument over a row of instants; ``sizes`` (n,) as in `InstrumentFault`."""
+
+    kind: InstrumentFaultKind
+    sizes: NDArray[np.float64]
 
 
 class LinkFaultKind(StrEnum):

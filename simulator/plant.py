@@ -86,8 +86,11 @@ class Plant:
             discharge_header_pa=at.discharge_header_pa * discharge.factor(self._plant_time),
         )
 
-    def _reading(self, tag: Input, true: float, step: float) -> float | bool:
-        reading = (self._instruments[tag.address].update(true, step) - tag.offset) / tag.scale
+    def _reading(self, tag: Input, true: float, step: float) -> float | bool | None:
+        in_si, _ = self._instruments[tag.address].update(true, step)
+        if in_si is None:
+            return None
+        reading = (in_si - tag.offset) / tag.scale
         if tag.quantity == "run_signal":
             return reading > 0.5
         return rounded(reading, tag.unit)

@@ -2,10 +2,13 @@
 
 import math
 import statistics
-from itertools import pairwise
+from dataclasses import replace
 
+import numpy as np
 import pytest
+from numpy.typing import NDArray
 
+from simulator import instruments
 from simulator.instruments import (
     BUDGETS,
     HOUR_S,
@@ -16,7 +19,7 @@ from simulator.instruments import (
     rounded,
 )
 
-# source: noise budget of the project: per tag white and hourly standard deviation, .6 from hour to hour
+# source: the job's noise budget: per tag white and hourly standard deviation, .6 from hour to hour
 BUDGET = [
     ("discharge_temperature", 400.0, 0.5, 1.0),
     ("suction_temperature", 300.0, 0.5, 1.0),
@@ -27,28 +30,41 @@ BUDGET = [
 ]
 
 
+def normal(instrument: Instrument, value: float, step_s: float, count: int) -> NDArray[np.float64]:
+    return instrument.readings(np.full(count, value), step_s)[0] - value
+
+
 @pytest.mark.parametrize(("quantity", "value", "white", "hourly"), BUDGET)
 def test_noise_has_the_budgeted_deviations(quantity: str, value: float, white: float, hourly: float) -> None:
     """The difference of neighbouring samples shows the white part, samples hours apart show both."""
-    instrument = Instrument(quantity, "7/test")
-    readings = [instrument.update(value, 1.0) - value for _ in range(4000)]
-    neighbours = [b - a for a, b in pairwise(readings)]
-    # in a second the slow part moves by sqrt(2 (1 - .6^(1/3600))) = 1.7 % of its deviation: no matter
-    # 4000 samples know a deviation within 1.2 % (one sigma); 5 % is four of them
-    assert statistics.stdev(neighbours) / math.sqrt(2) == pytest.approx(white, rel=0.05)
+    count = 40_000
+    # In a second the slow part moves by sqrt(2 (1 - .6^(1/3600))) = 1.7 % of its deviation, at most 2 white
+    # ones: .06 % of the figure. Neighbouring differences share a sample: the variance of the estimate is
+    # (1 + 2 * .25) / 2n of the figure squared, so its relative deviation is sqrt(.75 / n); five of them.
+    found = np.diff(normal(Instrument(quantity, "7/test"), value, 1.0, count)).std() / math.sqrt(2)
+    assert found == pytest.approx(white, rel=5 * math.sqrt(0.75 / count) + 0.0012)
 
-    instrument = Instrument(quantity, "8/test")
-    spaced = [instrument.update(value, 20 * HOUR_S) - value for _ in range(4000)]
-    assert statistics.stdev(spaced) == pytest.approx(math.hypot(white, hourly), rel=0.05)
+    # Twenty hours apart .6^20 of the slow part is left: independent. The deviation of n normal numbers is
+    # known within 1 / sqrt(2 n); five of them.
+    spaced = normal(Instrument(quantity, "8/test"), value, 20 * HOUR_S, count)
+    assert spaced.std() == pytest.approx(math.hypot(white, hourly), rel=5 / math.sqrt(2 * count))
+    assert abs(spaced.mean()) < 5 * math.hypot(white, hourly) / math.sqrt(count)
 
 
-def test_slow_part_keeps_six_tenths_from_one_hour_to_the_next() -> None:
-    instrument = Instrument("discharge_temperature", "9/test")
-    x = [instrument.update(400.0, HOUR_S) - 400.0 for _ in range(6000)]
-    mean = statistics.fmean(x)
-    lag_one = sum((a - mean) * (b - mean) for a, b in pairwise(x)) / len(x)
-    # hand: .6 of the hourly variance 1.0; sampling error about .02
-    assert lag_one == pytest.approx(0.6 * 1.0, abs=0.08)
+@pytest.mark.parametrize(("quantity", "value", "white", "hourly"), BUDGET)
+def test_slow_part_keeps_six_tenths_from_one_hour_to_the_next(
+    quantity: str, value: float, white: float, hourly: float
+) -> None:
+    """Readings an hour apart: what they share is the slow part's."""
+    count = 40_000
+    x = normal(Instrument(quantity, "9/test"), value, HOUR_S, count)
+    x = x - x.mean()
+    lagged = [float((x[k:] * x[: count - k]).mean()) for k in (1, 2)]
+    # source: noise budget: .6. Hand: covariance at k hours is .6^k of the slow variance, white adds none.
+    # Its deviation (Bartlett) is below sqrt((1 + 2 * .36 / .64) * 2 / n) of the whole variance; five of them.
+    wide = 5 * math.sqrt(2 * (1 + 2 * 0.36 / 0.64) / count) * (white**2 + hourly**2)
+    assert lagged[0] == pytest.approx(0.6 * hourly**2, abs=wide)
+    assert lagged[1] == pytest.approx(0.36 * hourly**2, abs=wide)
 
 
 def test_slow_part_is_stationary_whatever_the_step() -> None:
@@ -57,17 +73,16 @@ def test_slow_part_is_stationary_whatever_the_step() -> None:
         last = []
         for seed in range(1500):
             instrument = Instrument("discharge_temperature", f"{seed}/{step}")
-            for _ in range(3):
-                reading = instrument.update(400.0, step)
-            last.append(reading - 400.0)
+            reading, _ = instrument.readings(np.full(3, 400.0), step)
+            last.append(float(reading[-1]) - 400.0)
         # hand: sqrt(.5^2 + 1^2); 1500 samples know it within 1.8 %
         assert statistics.stdev(last) == pytest.approx(1.118, rel=0.08)
 
 
 def test_same_seed_gives_the_same_readings_and_another_seed_others() -> None:
-    def readings(seed: str) -> list[float]:
+    def readings(seed: str) -> list[float | None]:
         instrument = Instrument("flow", seed)
-        return [instrument.update(100.0, 1.0) for _ in range(5)]
+        return [instrument.update(100.0, 1.0)[0] for _ in range(5)]
 
     assert readings("1/FT") == readings("1/FT")
     assert readings("1/FT") != readings("2/FT")
@@ -105,14 +120,39 @@ def test_negative_time_constant_is_refused() -> None:
         FirstOrder(-1.0)
 
 
+def test_a_thermowell_in_metal_follows_with_two_time_constants(monkeypatch: pytest.MonkeyPatch) -> None:
+    """A step of the gas, without noise: hand, partial fractions of a well behind a share led by the metal."""
+    budget = BUDGETS["discharge_temperature"]
+    monkeypatch.setattr(
+        instruments, "BUDGETS", {"discharge_temperature": replace(budget, white=0.0, hourly=0.0)}
+    )
+    instrument = Instrument("discharge_temperature", "1/TT")
+    instrument.update(300.0, 0.0)
+    step = 0.5
+    found, _ = instrument.readings(np.full(8000, 400.0), step)
+    t = np.arange(1, 8001) * step
+    w, m, a = budget.lag_s, budget.soak_s, budget.soak_share
+    expected = 400.0 - 100 * (
+        (1 - a) * np.exp(-t / w) + a * (m * np.exp(-t / m) - w * np.exp(-t / w)) / (m - w)
+    )
+    assert (
+        np.abs(found - expected).max() < 100 * step / w
+    )  # the gas is held over each step: half a step at most
+    assert 356.5 < found[int(w / step)] < 358.5  # hand: .9 (1 - 1/e) and .1 of a fortieth
+    assert 3.8 < 400 - found[int(m / step)] < 4.1  # hand: .1 of 900/840 of 1/e; the well has long settled
+
+
 def test_thermowells_are_the_slow_ones() -> None:
-    assert BUDGETS["discharge_temperature"].lag_s == 60.0  # common practice: 30 to 60 s in a thermowell
+    for quantity in ("suction_temperature", "discharge_temperature"):
+        budget = BUDGETS[quantity]
+        assert 30.0 <= budget.lag_s <= 60.0  # common practice: 30 to 60 s in a thermowell
+        assert 600.0 <= budget.soak_s <= 1500.0  # common practice: metal soaks for 10 to 25 minutes
     assert max(b.lag_s for q, b in BUDGETS.items() if "temperature" not in q) <= 5.0
 
 
 def test_standing_shaft_reads_no_speed() -> None:
     instrument = Instrument("speed", "1/ST")
-    assert [instrument.update(0.0, 1.0) for _ in range(20)] == [0.0] * 20
+    assert [instrument.update(0.0, 1.0)[0] for _ in range(20)] == [0.0] * 20
 
 
 @pytest.mark.parametrize(
