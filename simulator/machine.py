@@ -38,6 +38,7 @@ SETTLED_PRESSURE: Final = 3e-4  # change of a bottle's pressure in ten turns, sh
 SETTLED_TEMPERATURE_K: Final = 0.05
 _RELAX: Final = 0.5  # share of the way a wall goes in one turn while settling
 _BLOCK: Final = 10  # turns
+_HUNDRED_K: Final = 100.0
 _WATER_STEP: Final = 2e-6  # change of water fraction that is worth new gas constants
 _COOLER_POWER: Final = 0.4  # heat-transfer units ~ flow to the minus this
 
@@ -129,6 +130,24 @@ class Machine:
                 return self._turns(averaged, _RELAX)
             before = outcome
         raise NotSettledError(self.unit.id, most)
+
+    def hasten(self, turns: int) -> MachineOutcome:
+        """Turn the crank with the walls hastened, as `settle` does; means over these turns."""
+        return self._turns(turns, _RELAX)
+
+    @property
+    def slow(self) -> Floats:
+        """What takes many turns to come to rest, each part of the order of one: bottles, then walls."""
+        bottles = (np.log(self._bottle_amount), self._bottle_temperature / _HUNDRED_K)
+        return np.concatenate((*bottles, self._wall / _HUNDRED_K))
+
+    def place(self, slow: Floats) -> None:
+        """Go on from another slow state; what moves within a turn follows by itself."""
+        amount, temperature, wall = np.split(slow, [len(self._volumes), 2 * len(self._volumes)])
+        self._bottle_amount[:] = np.exp(amount)
+        self._bottle_temperature[:] = temperature * _HUNDRED_K
+        self._wall[:] = wall * _HUNDRED_K
+        self._turning["wall_temperature"] = self._wall
 
     def cards(self) -> tuple[Card, ...]:
         """Pressure over crank angle of each cylinder, mean of the last run."""
