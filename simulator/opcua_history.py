@@ -30,13 +30,15 @@ class Ring:
         self._count += 1
 
     def between(self, low: float, high: float, *, newest_first: bool) -> Iterator[tuple[float, ua.DataValue]]:
-        """Values from ``low`` to ``high`` [s], both included, in the order they were put."""
+        """Values from ``low`` to ``high`` [s], both included, in the order of their times.
+
+        They are put in another order where a link was late or kept its past.
+        """
         order = range(max(0, self._count - self._size), self._count)
-        for number in reversed(order) if newest_first else order:
-            place = number % self._size
-            time = self._times[place]
-            if low <= time <= high:
-                yield time, self._data_value(place)
+        places = [number % self._size for number in order]
+        wanted = [place for place in places if low <= self._times[place] <= high]
+        for place in sorted(wanted, key=self._times.__getitem__, reverse=newest_first):
+            yield self._times[place], self._data_value(place)
 
     def _data_value(self, place: int) -> ua.DataValue:
         when = ua.DateTime.fromtimestamp(self._times[place], UTC)

@@ -1,6 +1,7 @@
 """The field bus: one MQTT topic per tag, JSON, at least once (QoS 1), by its own client.
 
-Payload: ``{"value": 29.01, "time": "2026-12-01T05:22:00.400Z", "quality": "good", "simulated": true}``.
+Payload: ``{"value": 29.01, "time": "2026-12-01T05:22:00.400Z", "quality": "good", "simulated": true}``; what
+was kept while the link was lost says ``"historical": true`` as well.
 A ledger, if asked for, gets one JSON line for each message that the broker confirmed, and none for others.
 """
 
@@ -10,13 +11,13 @@ from collections.abc import Sequence
 from datetime import UTC, datetime
 from pathlib import Path
 from typing import TextIO
-from urllib.parse import urlsplit
 
-from paho.mqtt.client import Client, ConnectFlags, DisconnectFlags
-from paho.mqtt.enums import CallbackAPIVersion, MQTTErrorCode, MQTTProtocolVersion
+from paho.mqtt.client import Client
+from paho.mqtt.enums import MQTTErrorCode
 from paho.mqtt.properties import Properties
 from paho.mqtt.reasoncodes import ReasonCode
 
+from simulator.broker_link import BrokerLink
 from simulator.sample import Sample
 
 CLIENT_ID = "ostmere-field-bus"
@@ -29,40 +30,35 @@ class MqttWire:
     def __init__(
         self, address: str, *, tags: int, ledger: Path | None = None, client_id: str = CLIENT_ID
     ) -> None:
-        url = urlsplit(address)
-        if url.scheme != "mqtt" or not url.hostname:
-            raise ValueError(f"{address!r} is not mqtt://host:port")
-        self._host, self._port = url.hostname, url.port or 1883
         self._ledger_path = ledger
         self._ledger: TextIO | None = None
         # Confirmations come on paho's thread while it holds its own lock; they are only noted there.
         self._confirmed: queue.SimpleQueue[int] = queue.SimpleQueue()
         self._unconfirmed: dict[int, Sample] = {}
-        self._up = False
         self.refused = 0
-        client = Client(
-            CallbackAPIVersion.VERSION2, client_id=client_id, protocol=MQTTProtocolVersion.MQTTv311
-        )
-        client.max_queued_messages_set(tags * KEPT_S)
-        client.reconnect_delay_set(min_delay=1, max_delay=5)
-        client.on_connect = self._on_connect
-        client.on_disconnect = self._on_disconnect
-        client.on_publish = self._on_publish
-        self._client = client
+        self._link = BrokerLink(address, client_id=client_id)
+        self._link.client.max_queued_messages_set(tags * KEPT_S)
+        self._link.client.on_publish = self._on_publish
 
     @property
     def up(self) -> bool:
-        return self._up
+        return self._link.up
 
     def open(self) -> None:
         if self._ledger_path is not None:
             self._ledger = self._ledger_path.open("a", encoding="utf-8")
-        self._client.connect_async(self._host, self._port, keepalive=15)
-        self._client.loop_start()
+        self._link.open()
+
+    def cut(self) -> None:
+        """Lose the connection; what is published meanwhile is kept for `KEPT_S`."""
+        self._link.cut()
+
+    def restore(self) -> None:
+        self._link.restore()
 
     def publish(self, samples: Sequence[Sample]) -> None:
         for sample in samples:
-            info = self._client.publish(sample.tag.address, payload(sample), qos=1)
+            info = self._link.client.publish(sample.tag.address, payload(sample), qos=1)
             if info.rc == MQTTErrorCode.MQTT_ERR_QUEUE_SIZE:
                 self.refused += 1
             elif self._ledger is not None:
@@ -81,36 +77,11 @@ class MqttWire:
         self._ledger.flush()
 
     def close(self) -> None:
-        connected = self._up
-        self._client.disconnect()
-        if connected:  # else its thread may sleep for a second before it looks; it ends by itself
-            self._client.loop_stop()
+        self._link.close()
         self.note_confirmed()
         if self._ledger is not None:
             self._ledger.close()
             self._ledger = None
-
-    def _on_connect(
-        self,
-        client: Client,
-        userdata: object,
-        flags: ConnectFlags,
-        reason: ReasonCode,
-        properties: Properties | None,
-    ) -> None:
-        del client, userdata, flags, properties
-        self._up = not reason.is_failure
-
-    def _on_disconnect(
-        self,
-        client: Client,
-        userdata: object,
-        flags: DisconnectFlags,
-        reason: ReasonCode,
-        properties: Properties | None,
-    ) -> None:
-        del client, userdata, flags, reason, properties
-        self._up = False
 
     def _on_publish(
         self, client: Client, userdata: object, mid: int, reason: ReasonCode, properties: Properties | None
@@ -123,5 +94,12 @@ class MqttWire:
 def payload(sample: Sample) -> str:
     """One message."""
     when = datetime.fromtimestamp(sample.time, UTC).isoformat(timespec="milliseconds").replace("+00:00", "Z")
-    quality = "bad" if sample.value is None else "good"
-    return json.dumps({"value": sample.value, "time": when, "quality": quality, "simulated": True})
+    fields = {
+        "value": sample.value,
+        "time": when,
+        "quality": sample.stated_quality.value,
+        "simulated": True,
+    }
+    if sample.historical:
+        fields["historical"] = True
+    return json.dumps(fields)

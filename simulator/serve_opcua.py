@@ -11,6 +11,7 @@ from asyncua import Server, ua
 from asyncua.common.node import Node
 
 from agent.siteplan.plan import Input, UnitPlan
+from simulator.instrument_faults import SampleQuality
 from simulator.opcua_history import HourOfHistory
 from simulator.sample import Sample
 
@@ -34,6 +35,7 @@ class OpcuaWire:
         self._nodes: dict[str, ua.NodeId] = {}
         self._history = HourOfHistory()
         self._server: Server | None = None
+        self._is_cut = False
 
     async def __aenter__(self) -> Self:
         server = Server()
@@ -62,14 +64,41 @@ class OpcuaWire:
                 pass  # neither that task nor a client that does not hang up may hold the plant
             self._server = None
 
+    @property
+    def is_cut(self) -> bool:
+        return self._is_cut
+
     async def write(self, samples: Sequence[Sample]) -> None:
-        """Put samples on the wire."""
-        if self._server is None:
-            raise RuntimeError("the server is opened before it is written to")
+        """Put samples on the wire; what was kept while the link was lost goes into the history alone."""
+        server = self._opened()
         for sample in samples:
             node, value = self._nodes[sample.tag.address], _data_value(sample)
-            await self._server.write_attribute_value(node, value)
+            if not sample.historical:
+                await server.write_attribute_value(node, value)
             self._history.put(node, sample.time, value)
+
+    async def cut(self) -> None:
+        """Close every connection without a word and answer no more; the server behind it goes on."""
+        server = self._opened()
+        if self._is_cut:
+            return
+        self._is_cut = True
+        for transport in list(server.iserver.asyncio_transports):
+            transport.abort()
+        if server.bserver is not None:
+            await server.bserver.stop()
+
+    async def restore(self) -> None:
+        """Answer again, with the history there is."""
+        server = self._opened()
+        if self._is_cut and server.bserver is not None:
+            await server.bserver.start()
+            self._is_cut = False
+
+    def _opened(self) -> Server:
+        if self._server is None:
+            raise RuntimeError("the server is opened before it is used")
+        return self._server
 
     async def _populate(self, server: Server, index: int) -> None:
         site = await server.nodes.objects.add_object(
@@ -168,15 +197,21 @@ def _variant_type(tag: Input) -> ua.VariantType:
     return ua.VariantType.Double if tag.subject == "unit" else ua.VariantType.Float
 
 
+_STATUS: Final = MappingProxyType(
+    {
+        SampleQuality.GOOD: ua.StatusCodes.Good,
+        SampleQuality.UNCERTAIN: ua.StatusCodes.UncertainSensorNotAccurate,
+        SampleQuality.BAD: ua.StatusCodes.BadSensorFailure,
+    }
+)
+
+
 def _data_value(sample: Sample) -> ua.DataValue:
     when = ua.DateTime.fromtimestamp(sample.time, UTC)
     kind = _variant_type(sample.tag)
-    failed = sample.value is None
     return ua.DataValue(
-        ua.Variant(_EMPTY[kind] if failed else sample.value, kind),
-        StatusCode=ua.StatusCode(
-            ua.UInt32(ua.StatusCodes.BadSensorFailure if failed else ua.StatusCodes.Good)
-        ),
+        ua.Variant(_EMPTY[kind] if sample.value is None else sample.value, kind),
+        StatusCode=ua.StatusCode(ua.UInt32(_STATUS[sample.stated_quality])),
         SourceTimestamp=when,
         ServerTimestamp=when,
     )

@@ -15,27 +15,29 @@ from collections import deque
 from collections.abc import Iterable, Mapping, Sequence
 from types import MappingProxyType
 from typing import Final
-from urllib.parse import urlsplit
 
-from paho.mqtt.client import Client, ConnectFlags, DisconnectFlags, MQTTMessage
-from paho.mqtt.enums import CallbackAPIVersion, MQTTProtocolVersion
-from paho.mqtt.properties import Properties
-from paho.mqtt.reasoncodes import ReasonCode
+from paho.mqtt.client import Client, MQTTMessage
 
 from agent.siteplan.plan import Input
 from agent.sparkplug.wire import (
     BDSEQ,
+    QUALITY,
     REBIRTH,
     SEQUENCE,
+    SIMULATED,
+    UNCERTAIN,
     DataType,
     MessageType,
     Metric,
     Payload,
     PropertySet,
     PropertyValue,
+    QualityCode,
     Topic,
     parsed,
 )
+from simulator.broker_link import BrokerLink
+from simulator.instrument_faults import SampleQuality
 from simulator.sample import Sample
 
 CLIENT_ID = "ostmere-field-gateway"
@@ -57,98 +59,89 @@ class SparkplugWire:
         client_id: str = CLIENT_ID,
         rebirth_s: float = REBIRTH_S,
     ) -> None:
-        url = urlsplit(address)
-        if url.scheme != "mqtt" or not url.hostname:
-            raise ValueError(f"{address!r} is not mqtt://host:port")
-        self._host, self._port = url.hostname, url.port or 1883
         self._book = _Book(group, tags)
         self._kept: deque[Sequence[Sample]] = deque(maxlen=KEPT_S)
+        self._newest: dict[str, Sample] = {}  # what a birth says of each tag
         self._rebirth_s = rebirth_s
         self._born_at = -math.inf
-        self._connected = threading.Event()
         self._birth_due = threading.Event()
-        client = Client(
-            CallbackAPIVersion.VERSION2, client_id=client_id, protocol=MQTTProtocolVersion.MQTTv311
+        self._link = BrokerLink(
+            address,
+            client_id=client_id,
+            before_connecting=self._before_connecting,
+            connected=self._bear_anew,
         )
-        client.reconnect_delay_set(min_delay=1, max_delay=5)
-        client.on_pre_connect = self._before_connecting
-        client.on_connect = self._on_connect
-        client.on_disconnect = self._on_disconnect
-        client.on_message = self._on_command
-        self._client = client
+        self._link.client.on_message = self._on_command
 
     @property
     def up(self) -> bool:
-        return self._connected.is_set()
+        return self._link.up
 
     def open(self) -> None:
-        self._client.connect_async(self._host, self._port, keepalive=15)
-        self._client.loop_start()
+        self._link.open()
+
+    def cut(self) -> None:
+        """Lose the connection: the broker tells the node's death."""
+        self._link.cut()
+
+    def restore(self) -> None:
+        """Connect again: the next samples are a birth."""
+        self._link.restore()
 
     def publish(self, samples: Sequence[Sample]) -> None:
-        """Send one instant: as a birth if one is due, else as data; keep it if the broker is away."""
+        """Send samples: as a birth if one is due, else as data; keep them if the broker is away."""
         if not samples:
             return
-        if not self._connected.is_set():
+        if not self.up:
             self._kept.append(samples)
             return
-        at = max(s.time for s in samples)
-        if self._birth_due.is_set() or not 0 <= at - self._born_at < self._rebirth_s:
+        past = [s for s in samples if s.historical]
+        present = [s for s in samples if not s.historical]
+        if present and self._birth_is_due(max(s.time for s in present)):
             self._birth_due.clear()
-            self._born_at = at
-            self._send(self._book.births(samples))
+            self._newest.update((s.tag.address, s) for s in sorted(present, key=_time))
+            self._born_at = max(s.time for s in present)
+            self._send(self._book.births(list(self._newest.values())))
             while self._kept:
-                self._send(self._book.data(self._kept.popleft(), historical=True))
+                self._send_past(self._kept.popleft())
+            told = {id(s) for s in self._newest.values()}
+            present = [s for s in present if id(s) not in told]
+        for lot in _lots(present):
+            self._send(self._book.data(lot))
+            self._newest.update((s.tag.address, s) for s in lot)
+        if past and self._birth_due.is_set():  # nothing has a name yet
+            self._kept.append(past)
         else:
-            self._send(self._book.data(samples))
+            self._send_past(past)
+
+    def _birth_is_due(self, at: float) -> bool:
+        return self._birth_due.is_set() or abs(at - self._born_at) >= self._rebirth_s
 
     def close(self) -> None:
         """Say farewell with the node's own death, as an intended disconnect drops the will."""
-        connected = self.up
-        if connected:
+        if self.up:
             topic, payload = self._book.death()
-            self._client.publish(str(topic), payload.SerializeToString(), qos=_AT_LEAST_ONCE)
-        self._client.disconnect()
-        if connected:  # else its thread may sleep for a second before it looks; it ends by itself
-            self._client.loop_stop()
+            self._link.client.publish(str(topic), payload.SerializeToString(), qos=_AT_LEAST_ONCE)
+        self._link.close()
 
     def _send(self, messages: Iterable[tuple[Topic, Payload]]) -> None:
         for topic, payload in messages:
-            self._client.publish(str(topic), payload.SerializeToString(), qos=0)
+            self._link.client.publish(str(topic), payload.SerializeToString(), qos=0)
+
+    def _send_past(self, samples: Sequence[Sample]) -> None:
+        for lot in _lots(samples):
+            self._send(self._book.data(lot, historical=True))
 
     # on paho's thread
 
-    def _before_connecting(self, client: Client, userdata: object) -> None:
-        del userdata
+    def _before_connecting(self, client: Client) -> None:
         self._book.next_session()
         topic, payload = self._book.death()
         client.will_set(str(topic), payload.SerializeToString(), qos=_AT_LEAST_ONCE)
 
-    def _on_connect(
-        self,
-        client: Client,
-        userdata: object,
-        flags: ConnectFlags,
-        reason: ReasonCode,
-        properties: Properties | None,
-    ) -> None:
-        del userdata, flags, properties
-        if reason.is_failure:
-            return
+    def _bear_anew(self, client: Client) -> None:
         client.subscribe(str(self._book.topic(MessageType.NODE_COMMAND)), qos=_AT_LEAST_ONCE)
         self._birth_due.set()
-        self._connected.set()
-
-    def _on_disconnect(
-        self,
-        client: Client,
-        userdata: object,
-        flags: DisconnectFlags,
-        reason: ReasonCode,
-        properties: Properties | None,
-    ) -> None:
-        del client, userdata, flags, reason, properties
-        self._connected.clear()
 
     def _on_command(self, client: Client, userdata: object, message: MQTTMessage) -> None:
         """The one command an edge node must follow: to bear itself anew."""
@@ -176,7 +169,7 @@ class _Book:
         self._aliases = {tag.address: alias for alias, tag in enumerate(tags, start=1)}
         self._bdseq = -1
         self._sequence = 0
-        self._told: dict[str, float | bool | str | None] = {}  # what was last sent of each tag
+        self._told: dict[str, tuple[float | bool | str | None, SampleQuality]] = {}  # last sent of each tag
 
     def topic(self, kind: MessageType, device: str = "") -> Topic:
         return Topic(group=self._group, type=kind, node=self._node, device=device)
@@ -220,8 +213,9 @@ class _Book:
                 if historical:
                     metric.is_historical = True
                 else:
-                    self._told[tag.address] = sample.value
+                    self._told[tag.address] = (sample.value, sample.stated_quality)
                 put_value(metric, sample.value, data_type(tag))
+                put_properties(metric, sample.stated_quality)
                 metrics.append(metric)
             if metrics:
                 messages.append(self._next(MessageType.DEVICE_DATA, device, at, metrics))
@@ -240,13 +234,15 @@ class _Book:
             ),
         )
         value = None if sample is None else sample.value
-        self._told[tag.address] = value
+        quality = SampleQuality.BAD if sample is None else sample.stated_quality
+        self._told[tag.address] = (value, quality)
         put_value(metric, value, kind)
+        put_properties(metric, quality)
         return metric
 
     def _is_told(self, sample: Sample) -> bool:
         address = sample.tag.address
-        return sample.tag.on_change and address in self._told and self._told[address] == sample.value
+        return sample.tag.on_change and self._told.get(address) == (sample.value, sample.stated_quality)
 
     def _next(
         self, kind: MessageType, device: str, at: int, metrics: Sequence[Metric]
@@ -283,6 +279,40 @@ def put_value(metric: Metric, value: float | bool | str | None, kind: DataType) 
         metric.is_null = True
     else:
         setattr(metric, _FIELDS[kind], value)
+
+
+def put_properties(metric: Metric, quality: SampleQuality) -> None:
+    """Say of a value how good it is, and that it is invented.
+
+    The specification knows good, bad and stale alone; uncertain is good with a property of our own.
+    """
+    code = QualityCode.BAD if quality is SampleQuality.BAD else QualityCode.GOOD
+    said = [
+        (QUALITY, PropertyValue(type=DataType.INT32, int_value=code)),
+        (SIMULATED, PropertyValue(type=DataType.BOOLEAN, boolean_value=True)),
+    ]
+    if quality is SampleQuality.UNCERTAIN:
+        said.append((UNCERTAIN, PropertyValue(type=DataType.BOOLEAN, boolean_value=True)))
+    for key, value in said:
+        metric.properties.keys.append(key)
+        metric.properties.values.append(value)
+
+
+def _lots(samples: Iterable[Sample]) -> list[list[Sample]]:
+    """Samples in groups in which no tag stands twice, the later ones of a tag in the later groups."""
+    lots: list[list[Sample]] = []
+    count: dict[str, int] = {}
+    for sample in sorted(samples, key=_time):
+        place = count.get(sample.tag.address, 0)
+        count[sample.tag.address] = place + 1
+        if place == len(lots):
+            lots.append([])
+        lots[place].append(sample)
+    return lots
+
+
+def _time(sample: Sample) -> float:
+    return sample.time
 
 
 def _milliseconds(seconds: float) -> int:

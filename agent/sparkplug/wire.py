@@ -9,14 +9,18 @@ from google.protobuf.message import DecodeError
 from agent.sparkplug.payload_pb2 import Metric, Payload, PropertySet, PropertyValue
 
 __all__ = [
-    "BDSEQ", "NAMESPACE", "QUALITY", "REBIRTH", "SEQUENCE", "DataType", "MessageType", "Metric", "Payload",
-    "PropertySet", "PropertyValue", "QualityCode", "Topic", "parsed", "topic_of",
+    "BDSEQ", "NAMESPACE", "QUALITY", "REBIRTH", "SEQUENCE", "SIMULATED", "UNCERTAIN", "DataType",
+    "MessageType", "Metric", "Payload", "PropertySet", "PropertyValue", "QualityCode", "Topic", "parsed",
+    "topic_of",
 ]  # fmt: skip
 
 NAMESPACE: Final = "spBv1.0"
 BDSEQ: Final = "bdSeq"  # metric that ties a death to its birth
 REBIRTH: Final = "Node Control/Rebirth"
 QUALITY: Final = "Quality"  # property of a metric
+# Properties of our own: the specification has no word for either.
+SIMULATED: Final = "simulated"  # true: an invented plant
+UNCERTAIN: Final = "uncertain"  # true: a value that is neither good nor bad
 SEQUENCE: Final = 256  # sequence numbers run from 0 to 255 and start over
 
 

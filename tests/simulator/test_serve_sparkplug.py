@@ -1,24 +1,19 @@
 """The edge node keeps the rules of Sparkplug B 3.0: session, order, names, deaths, history."""
 
-import queue
 import socket
-import subprocess
-import sys
-import time
-from collections.abc import Callable, Iterator
+from collections.abc import Iterator
 from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
 import pytest
-from paho.mqtt.client import Client, MQTTMessage
-from paho.mqtt.enums import CallbackAPIVersion
 
 from agent.siteplan.load import load_site
 from agent.siteplan.plan import Input
-from agent.sparkplug.wire import DataType, Metric, Payload
+from agent.sparkplug.wire import DataType, Metric
 from simulator.sample import Sample
 from simulator.serve_sparkplug import SparkplugWire, data_type, put_value
+from tests.simulator.wires import Broker, Host, until
 
 ROOT = Path(__file__).resolve().parents[2]
 PLAIN = load_site(ROOT / "tests" / "config_errors" / "no_mistake.yaml").units[0]
@@ -39,66 +34,6 @@ def instant(values: dict[str, Any], at: float = NOW) -> list[Sample]:
 
 
 FIRST = {"suction_pressure": 20.25, "load_step": "full", "run_signal": True, "flow": 1234.5}
-
-
-class Broker:
-    def __init__(self) -> None:
-        with socket.socket() as probe:
-            probe.bind(("127.0.0.1", 0))
-            self.port = int(probe.getsockname()[1])
-        self.start()
-
-    def start(self) -> None:
-        command = [sys.executable, "-P", "-m", "simulator.broker_main", "--port", str(self.port)]
-        self.process = subprocess.Popen(command, stdout=subprocess.PIPE, cwd=ROOT)
-        assert self.process.stdout is not None
-        assert self.process.stdout.readline() == b"broker up\n"
-
-    def stop(self) -> None:
-        self.process.terminate()
-        self.process.wait(10)
-        assert self.process.stdout is not None
-        self.process.stdout.close()
-
-
-class Host:
-    """A host application: hears the group, may ask for a birth."""
-
-    def __init__(self, port: int) -> None:
-        self.messages: queue.SimpleQueue[MQTTMessage] = queue.SimpleQueue()
-        subscribed: queue.SimpleQueue[bool] = queue.SimpleQueue()
-        self.client = Client(CallbackAPIVersion.VERSION2, client_id="host")
-        self.client.on_connect = lambda *_: self.client.subscribe("spBv1.0/g/#", qos=1)
-        self.client.on_message = lambda _c, _u, message: self.messages.put(message)
-        self.client.on_subscribe = lambda *_: subscribed.put(True)
-        self.client.connect("127.0.0.1", port)
-        self.client.loop_start()
-        subscribed.get(timeout=20)
-
-    def take(self, count: int) -> list[tuple[str, Payload]]:
-        found = []
-        for _ in range(count):
-            message = self.messages.get(timeout=20)
-            assert not message.retain
-            found.append((message.topic, Payload.FromString(message.payload)))
-        return found
-
-    def ask_for_birth(self) -> None:
-        metric = Metric(name="Node Control/Rebirth", datatype=DataType.BOOLEAN, boolean_value=True)
-        command = Payload(timestamp=MS, metrics=[metric]).SerializeToString()
-        self.client.publish("spBv1.0/g/NCMD/gw", command, qos=1).wait_for_publish(20)
-        assert self.take(1)[0][0] == "spBv1.0/g/NCMD/gw"  # its own
-
-    def close(self) -> None:
-        self.client.disconnect()
-        self.client.loop_stop()
-
-
-def until(ready: Callable[[], Any], seconds: float = 20.0) -> None:
-    end = time.monotonic() + seconds
-    while not ready():
-        assert time.monotonic() < end
-        time.sleep(0.02)
 
 
 @pytest.fixture
@@ -169,7 +104,7 @@ def test_numbers_run_from_0_to_255_over_all_messages_since_the_birth(host: Host,
 def test_it_bears_itself_anew_when_asked_and_by_its_own_timer(host: Host, wire: SparkplugWire) -> None:
     wire.publish(instant(FIRST))
     host.take(2)
-    host.ask_for_birth()
+    host.ask_for_birth(MS)
     until(wire._birth_due.is_set)
     wire.publish(instant(FIRST, NOW + 1))
     assert [(t.split("/")[2], p.seq) for t, p in host.take(2)] == [("NBIRTH", 0), ("DBIRTH", 1)]
@@ -195,7 +130,7 @@ def test_a_lost_connection_is_a_death_and_the_next_session_has_the_next_number(
 ) -> None:
     wire.publish(instant(FIRST))
     host.take(2)
-    sock = wire._client.socket()
+    sock = wire._link.client.socket()
     assert sock is not None
     sock.shutdown(socket.SHUT_RDWR)  # as a cut cable: no word of farewell
     [(topic, death)] = host.take(1)

@@ -2,12 +2,8 @@
 
 import asyncio
 import json
-import queue
-import socket
-import subprocess
-import sys
 import time
-from collections.abc import Callable, Coroutine, Iterator
+from collections.abc import Coroutine, Iterator
 from contextlib import AsyncExitStack
 from datetime import UTC, datetime
 from pathlib import Path
@@ -17,9 +13,6 @@ import numpy as np
 import pytest
 from asyncua import Client, Node, ua
 from asyncua.ua.uaerrors import BadUserAccessDenied
-from paho.mqtt.client import Client as MqttClient
-from paho.mqtt.client import MQTTMessage
-from paho.mqtt.enums import CallbackAPIVersion
 
 from agent.siteplan.load import load_site
 from agent.siteplan.plan import SitePlan
@@ -31,47 +24,11 @@ from simulator.scenario import load_scenario
 from simulator.serve_mqtt import MqttWire, payload
 from simulator.serve_opcua import NAMESPACE, OpcuaWire, unit_id
 from simulator.steady_table import MACHINES
+from tests.simulator.wires import Broker, Subscriber, free_port, until
 
 SITE = scenario_path("quiet").parents[1] / "sites" / "ostmere.yaml"
 NOW = 1_800_000_000.4
 Result = TypeVar("Result")
-
-
-def free_port() -> int:
-    with socket.socket() as probe:
-        probe.bind(("127.0.0.1", 0))
-        return int(probe.getsockname()[1])
-
-
-def until(ready: Callable[[], Any], seconds: float = 15.0) -> Any:
-    end = time.monotonic() + seconds
-    while time.monotonic() < end:
-        if found := ready():
-            return found
-        time.sleep(0.02)
-    raise AssertionError("not in time")
-
-
-class Broker:
-    def __init__(self) -> None:
-        self.port = free_port()
-        self.start()
-
-    def start(self) -> None:
-        self.process = subprocess.Popen(
-            [sys.executable, "-P", "-m", "simulator.broker_main", "--port", str(self.port)],
-            stdout=subprocess.PIPE,
-            cwd=SITE.parents[2],
-        )
-        assert self.process.stdout is not None
-        assert self.process.stdout.readline() == b"broker up\n"
-
-    def stop(self) -> int:
-        self.process.terminate()
-        code = self.process.wait(10)
-        assert self.process.stdout is not None
-        self.process.stdout.close()
-        return code
 
 
 @pytest.fixture
@@ -79,26 +36,6 @@ def broker() -> Iterator[Broker]:
     made = Broker()
     yield made
     made.stop()
-
-
-class Subscriber:
-    def __init__(self, port: int) -> None:
-        self.messages: queue.SimpleQueue[MQTTMessage] = queue.SimpleQueue()
-        subscribed: queue.SimpleQueue[bool] = queue.SimpleQueue()
-        self.client = MqttClient(CallbackAPIVersion.VERSION2, client_id="test-reader")
-        self.client.on_message = lambda _c, _u, message: self.messages.put(message)
-        self.client.on_subscribe = lambda *_: subscribed.put(True)
-        self.client.connect("127.0.0.1", port)
-        self.client.loop_start()
-        self.client.subscribe("ostmere/#", qos=1)
-        subscribed.get(timeout=10)
-
-    def take(self, count: int) -> list[MQTTMessage]:
-        return [self.messages.get(timeout=10) for _ in range(count)]
-
-    def close(self) -> None:
-        self.client.disconnect()
-        self.client.loop_stop()
 
 
 def site(mqtt: int = 1, opcua: int = 1) -> SitePlan:
@@ -120,13 +57,13 @@ def samples(plan: SitePlan, source: str, at: float = NOW) -> list[Sample]:
 def test_every_message_on_the_field_bus_is_the_plants_sample(broker: Broker) -> None:
     plan = site(mqtt=broker.port)
     sent = samples(plan, "field-bus")
-    reader = Subscriber(broker.port)
+    reader = Subscriber(broker.port, "ostmere/#")
     wire = MqttWire(plan.sources["field-bus"].address, tags=len(sent))
     wire.open()
     try:
         until(lambda: wire.up)
         wire.publish(sent)
-        messages = reader.take(len(sent))
+        messages = reader.messages_of(len(sent))
     finally:
         wire.close()
         reader.close()
