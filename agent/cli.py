@@ -90,6 +90,21 @@ def dashboard(
 
 
 @app.command()
+def explain(
+    site: SiteFile,
+    unit: Annotated[str, typer.Argument(help="Id of the unit.", show_default=False)],
+    quantity: Annotated[str, typer.Argument(help="Series, such as stage1.stage_ratio.", show_default=False)],
+    data: DataFolder,
+    at: Annotated[str | None, typer.Option(help="ISO 8601; site time if it names no zone.")] = None,
+) -> None:
+    """Show the working of a stored number: inputs, formulas, each step's value, sources."""
+    plan = _site_or_exit(site)
+    from agent.explain_report import explain as run  # noqa: PLC0415
+
+    raise typer.Exit(run(plan, data, unit, quantity, at=at))
+
+
+@app.command()
 def plant(
     site: SiteFile,
     address: Addresses = None,

@@ -4,16 +4,20 @@ import hashlib
 from importlib.resources import files
 from pathlib import Path
 from typing import Final
+from urllib.parse import unquote
 
 from dash import Dash, Input, Output, dcc, html
 from dash.development.base_component import Component
 
 from agent.clock import Clock, SystemClock
+from agent.database import SERIES_FILE
+from agent.explanation import Explainer
 from agent.siteplan.plan import SitePlan
+from agent.storage.sqlite_series import SeriesReader
 from dashboard import access, api
 from dashboard.curves import CurveBook
 from dashboard.live import LiveFeed
-from dashboard.pages import alarms, guide
+from dashboard.pages import alarms, guide, working
 from dashboard.pages import site as site_page
 from dashboard.pages import unit as unit_page
 from dashboard.pages.frame import frame, page
@@ -61,11 +65,18 @@ def create_app(*, site: SitePlan, data: Path, clock: Clock | None = None) -> Das
         use_pages=False,  # the folder pages/ is ours, routed below
     )
     app.enable_dev_tools(debug=False, dev_tools_disable_version_check=True)
+    explainer = Explainer(site, SeriesReader(data / SERIES_FILE), data)
     app.layout = html.Div([dcc.Location(id="address"), html.Div(id="page")])
 
     @app.callback(Output("page", "children"), Input("address", "pathname"))
     def show(path: str | None) -> Component:
-        return frame(site, path or "/", content_of(site, path or "/"))
+        return frame(site, path or "/", worked(path or "/") or content_of(site, path or "/"))
+
+    def worked(path: str) -> Component | None:
+        match [unquote(p) for p in path.split("/") if p]:
+            case ["unit", unit_id, "working", name] if unit_id in {p.id for p in site.units}:
+                return working.layout(site, unit_id, name, explainer, now=clock.now())
+        return None
 
     feed = LiveFeed(site, data, clock, pages_version=pages_version(site))
     doors = api.Doors(site=site, data=data, clock=clock, feed=feed, curves=CurveBook(site, data))
@@ -83,7 +94,7 @@ def feed_of(app: Dash) -> LiveFeed:
 
 
 def content_of(site: SitePlan, path: str) -> Component:
-    """The page of an address."""
+    """The page of an address that asks nothing of the store."""
     parts = [p for p in path.split("/") if p]
     match parts:
         case []:

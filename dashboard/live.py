@@ -17,10 +17,10 @@ from agent.records import AlarmEvent, LinkState, SourceStatus
 from agent.siteplan.plan import SitePlan, UnitPlan
 from agent.storage.series import Columns
 from agent.storage.sqlite_series import SeriesReader
+from agent.stored_site import StoredSites
 from dashboard.alarm_view import journal_rows, open_alarms
 from dashboard.margin_view import margins, smallest
 from dashboard.readings import Blindness, Row, row_of
-from dashboard.stored_site import StoredSites
 from dashboard.trend import DayLines, Line
 from dashboard.unit_view import Reasons, Scene, empty_unit, rank, unit_view
 from dashboard.wording import clock as clock_words

@@ -97,7 +97,9 @@ class _Builder:
     def symbol(self, subject: str, quantity: Quantity) -> str:
         if quantity.kind is Kind.MARGIN:
             return self._margin(subject, quantity)
-        if quantity.kind is Kind.MEASURED or quantity.key == "run_state":
+        if quantity.key == "run_state":
+            raise KeyError(quantity.key)  # a state of a table and no formula
+        if quantity.kind is Kind.MEASURED:
             return self._measured_value(subject, quantity)
         if subject == "unit":
             return self._of_unit(quantity.key)
@@ -272,10 +274,11 @@ class _Builder:
         )
 
     def _input(self, symbol: str, subject: str, key: str, words: str) -> None:
-        value = float(self._measured.column(series_name(subject, key))[0])
+        name = series_name(subject, key)
+        value = float(self._measured.column(name)[0])
         if not np.isfinite(value):
             raise NotEvaluatedError(Verdict.INPUT_MISSING)
-        self._sheet.given(symbol, words, value, QUANTITIES[key].unit, "measured")
+        self._sheet.given(symbol, words, value, QUANTITIES[key].unit, "measured", name)
 
     def _from_own_working(self, symbol: str, stage: Stage, key: str, unit: str) -> None:
         name = series_name(stage.subject, key)

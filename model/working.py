@@ -27,9 +27,8 @@ class Given:
     words: str
     value: Array
     unit: str
-    origin: (
-        str  # where it comes from: "measured", "nameplate", "correction", "site file", "search", "constant"
-    )
+    origin: str  # in words: measured, nameplate, correction, site file, search, constant
+    series: str = ""  # of a measured one
 
 
 @dataclass(frozen=True, slots=True, eq=False, kw_only=True)
@@ -70,8 +69,13 @@ class Sheet:
     values: dict[str, Array] = field(default_factory=dict)
     lines: dict[str, Given | Step] = field(default_factory=dict)
 
-    def given(self, symbol: str, words: str, value: Array | float, unit: str, origin: str) -> None:
-        self._take(Given(symbol=symbol, words=words, value=np.asarray(value), unit=unit, origin=origin))
+    def given(  # noqa: PLR0917 - columns of a table
+        self, symbol: str, words: str, value: Array | float, unit: str, origin: str, series: str = ""
+    ) -> None:
+        line = Given(
+            symbol=symbol, words=words, value=np.asarray(value), unit=unit, origin=origin, series=series
+        )
+        self._take(line)
 
     def step(self, symbol: str, words: str, expression: str, unit: str, source: str = OURS) -> Array:
         extra = {name: function for name, (function, _) in self.functions.items()}

@@ -140,7 +140,13 @@ def _cell(plan: UnitPlan, subject: str, key: str) -> Component:
     band = (
         live_span(name + UNCERTAINTY_SUFFIX, plan.id, "band") if has_band else html.Span("", className="band")
     )
-    children = [live_span(name, plan.id), band]
+    number = html.A(
+        live_span(name, plan.id),
+        href=f"/unit/{plan.id}/working/{name}",
+        className="worked",
+        **attributes(aria_label=f"Working of {QUANTITIES[key].words}, {subject_words(subject)}"),
+    )
+    children = [number, band]
     more: dict[str, Any] = {"title": f"{entry.tag}, {entry.tap}"} if entry is not None else {}
     return html.Td(children, className="numeric", **more)
 

@@ -11,7 +11,7 @@ from agent.storage.sqlite_series import SeriesReader
 
 
 class StoredSites:
-    """Finds the site of a stored configuration; the pages' own one is not read again."""
+    """Finds the site of a stored configuration; the one now in force is not read again."""
 
     def __init__(self, site: SitePlan, reader: SeriesReader) -> None:
         self._site = site
