@@ -137,17 +137,22 @@ class Machine:
 
     @property
     def slow(self) -> Floats:
-        """What takes many turns to come to rest, each part of the order of one: bottles, then walls."""
-        bottles = (np.log(self._bottle_amount), self._bottle_temperature / _HUNDRED_K)
-        return np.concatenate((*bottles, self._wall / _HUNDRED_K))
+        """What takes many turns to come to rest, each part of the order of one; idle ends are slow too."""
+        moving = self._moving
+        amounts = (self._bottle_amount, moving["amount"], moving["passage_amount"])
+        warmths = (self._bottle_temperature, moving["temperature"], moving["passage_temperature"], self._wall)
+        return np.concatenate([*(np.log(n) for n in amounts), *(t / _HUNDRED_K for t in warmths)])
 
     def place(self, slow: Floats) -> None:
         """Go on from another slow state; what moves within a turn follows by itself."""
-        amount, temperature, wall = np.split(slow, [len(self._volumes), 2 * len(self._volumes)])
-        self._bottle_amount[:] = np.exp(amount)
-        self._bottle_temperature[:] = temperature * _HUNDRED_K
-        self._wall[:] = wall * _HUNDRED_K
-        self._turning["wall_temperature"] = self._wall
+        bottles, ends = len(self._volumes), len(self._places)
+        sizes = (bottles, ends, ends, bottles, ends, ends)
+        parts = np.split(slow, np.cumsum(sizes))
+        moving = self._moving
+        self._bottle_amount[:], moving["amount"], moving["passage_amount"] = (np.exp(x) for x in parts[:3])
+        warmths = [x * _HUNDRED_K for x in parts[3:]]
+        self._bottle_temperature[:], moving["temperature"], moving["passage_temperature"] = warmths[:3]
+        self._wall[:] = self._turning["wall_temperature"] = warmths[3]
 
     def cards(self) -> tuple[Card, ...]:
         """Pressure over crank angle of each cylinder, mean of the last run."""
