@@ -1,7 +1,7 @@
-"""Settling a machine quickly at many points: each start is foretold from the points before, then extrapolated.
+"""Settling a machine quickly at many points: starts are foretold and states extrapolated.
 
-A machine left alone comes to rest over some sixty turns, the bottles last. Here bottles and walls are moved on
-by what the last few turns have shown of their way (Anderson mixing), from a start that a polynomial through all
+A machine left alone comes to rest over some sixty turns, the bottles last. Here its slow state is moved on by
+what the last few turns have shown of its way (Anderson mixing), from a start that a polynomial through all
 points settled before foretells. It comes to the same state as `Machine.settle`, in a third of the turns.
 """
 
