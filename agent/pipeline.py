@@ -39,7 +39,7 @@ from agent.records import (
 from agent.siteplan.plan import SitePlan, UnitPlan
 from agent.storage.sqlite_series import SeriesReader, SeriesWriter
 from agent.unit_line import UnitLine
-from model.quantities import QUANTITIES, split_series
+from model.quantities import QUANTITIES, series_unit
 
 _log = logging.getLogger(__name__)
 
@@ -327,7 +327,7 @@ def _due(now: float) -> int:
 
 def result_columns(plan: UnitPlan) -> list[tuple[str, str]]:
     """Name and SI unit of each derived series of a unit."""
-    return [(name, split_series(name)[1].unit) for name in plan.result_names()]
+    return [(name, series_unit(name)) for name in plan.result_names()]
 
 
 def input_columns(plan: UnitPlan) -> list[tuple[str, str]]:

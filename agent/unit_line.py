@@ -9,14 +9,15 @@ from numpy.typing import NDArray
 from agent.manipulation.running import RunningState
 from agent.records import DerivedRow, Frame, Quality, RunState
 from agent.siteplan.plan import UnitPlan
-from model.evaluate import Corrections, InputAccuracy, Measured, evaluate_with_uncertainty
+from model.evaluate import Corrections, Evaluation, InputAccuracy, Measured, evaluate
+from model.jacobian import JacobianKeeper
 from model.quantities import series_name
 from model.surface import GasSurface
 
 _log = logging.getLogger(__name__)
 
 # Larger batches fall out of the processor's cache and run slower.
-_CHUNK = 20
+_CHUNK = 200
 
 RUN_STATE = series_name("unit", "run_state")
 
@@ -37,13 +38,20 @@ class UnitLine:
         self._input_names = plan.input_names()
         self._result_names = plan.result_names()
         self._run_state_place = self._result_names.index(RUN_STATE)
-        self._accuracy = InputAccuracy.from_limits(self._input_names, [i.accuracy for i in plan.inputs])
+        accuracy = InputAccuracy.from_limits(
+            self._input_names,
+            [i.accuracy for i in plan.inputs],
+            [f"{i.source} {i.address}" for i in plan.inputs],
+        )
+        # One keeper for live and late frames: its numbers follow from the frame alone.
+        self._keeper = JacobianKeeper(self._run, accuracy)
         self._required = np.array([i.required for i in plan.inputs])
         self._failing = False
         self.reset()
 
     def reset(self) -> None:
         self._running = RunningState(self.plan)
+        self._keeper.reset()
 
     def live(self, frames: Iterable[Frame]) -> list[DerivedRow]:
         """Results of frames in the order of time, each tick once."""
@@ -68,10 +76,7 @@ class UnitLine:
         inputs = np.stack([f.values for f in frames]).astype(np.float64)
         try:
             measured = Measured.from_inputs(self.plan.unit, self._input_names, inputs)
-            evaluation = evaluate_with_uncertainty(
-                self.plan.unit, self._gas, self._corrections, measured, self._accuracy
-            )
-            values, quality = evaluation.table(self._result_names)
+            values, quality = self._keeper.update(measured).table(self._result_names)
         except Exception:  # noqa: BLE001 - see below
             # A fault of ours in one unit must not blind the others; its numbers are withheld, never guessed.
             if not self._failing:
@@ -81,6 +86,9 @@ class UnitLine:
             return np.full(shape, np.nan), np.full(shape, Quality.OUT_OF_MODEL, dtype=np.uint8)
         self._failing = False
         return values, quality
+
+    def _run(self, measured: Measured) -> Evaluation:
+        return evaluate(self.plan.unit, self._gas, self._corrections, measured)
 
     def _row(
         self, frame: Frame, state: RunState, values: NDArray[np.float64], quality: NDArray[np.uint8]

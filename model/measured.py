@@ -57,6 +57,10 @@ class Measured:
             assumed["unit.load_step"] = 0.0
         return cls(names=tuple(names), values=table, assumed=MappingProxyType(assumed))
 
+    def like(self, values: Array) -> "Measured":
+        """Other frames (frames, inputs) of the same inputs. [SI]"""
+        return Measured(names=self.names, values=values, assumed=self.assumed)
+
     @property
     def frames(self) -> int:
         """How many frames there are."""

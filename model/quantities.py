@@ -2,7 +2,8 @@
 
 Series names, labels, display units, decimals and documentation all come from this one table. A stored
 series is named ``<subject>.<key>``, where the subject is ``unit``, ``stage1`` or ``cylinder1``; the
-standard uncertainty of an estimate stands beside it as ``<subject>.<key>.u``.
+standard uncertainty of an estimate stands beside it as ``<subject>.<key>.u``, and the probability that a
+limit is passed beside its margin as ``<subject>.<key>_margin.p``.
 """
 
 from dataclasses import dataclass
@@ -11,6 +12,7 @@ from types import MappingProxyType
 from typing import Final
 
 UNCERTAINTY_SUFFIX: Final = ".u"
+PROBABILITY_SUFFIX: Final = ".p"
 
 
 class Scope(StrEnum):
@@ -194,11 +196,26 @@ def series_name(subject: str, key: str) -> str:
 def split_series(name: str) -> tuple[str, Quantity, bool]:
     """Take a series name apart into subject, quantity and whether it is the uncertainty of it.
 
+    The probability beside a margin (`PROBABILITY_SUFFIX`) takes the quantity of its margin; `series_unit`
+    knows that it is a plain number.
+
     Raises
     ------
     KeyError
         The name holds no known quantity.
     """
     is_uncertainty = name.endswith(UNCERTAINTY_SUFFIX)
-    subject, _, key = name.removesuffix(UNCERTAINTY_SUFFIX).partition(".")
+    bare = name.removesuffix(PROBABILITY_SUFFIX).removesuffix(UNCERTAINTY_SUFFIX)
+    subject, _, key = bare.partition(".")
     return subject, QUANTITIES[key], is_uncertainty
+
+
+def series_unit(name: str) -> str:
+    """SI unit of a stored series.
+
+    Raises
+    ------
+    KeyError
+        The name holds no known quantity.
+    """
+    return "1" if name.endswith(PROBABILITY_SUFFIX) else split_series(name)[1].unit

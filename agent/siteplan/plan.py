@@ -7,7 +7,14 @@ from typing import Final
 from zoneinfo import ZoneInfo
 
 from model.machine import Unit
-from model.quantities import QUANTITIES, UNCERTAINTY_SUFFIX, Kind, Scope, series_name
+from model.quantities import (
+    PROBABILITY_SUFFIX,
+    QUANTITIES,
+    UNCERTAINTY_SUFFIX,
+    Kind,
+    Scope,
+    series_name,
+)
 
 # Units, in a site file, of inputs that send no number.
 WORD: Final = "word"
@@ -32,6 +39,7 @@ class Source:
     name: str
     kind: SourceKind
     address: str
+    takes_simulated: bool = False  # only at a site that is an invented plant
     # both kinds of MQTT
     mqtt_version: MqttVersion = MqttVersion.V5
     client_id: str = ""
@@ -123,6 +131,8 @@ class UnitPlan:
                 names.append(name)
                 if quantity.has_uncertainty:
                     names.append(name + UNCERTAINTY_SUFFIX)
+                if quantity.kind is Kind.MARGIN:
+                    names.append(name + PROBABILITY_SUFFIX)
         return tuple(names)
 
 

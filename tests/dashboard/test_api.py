@@ -56,7 +56,7 @@ def test_numbers_are_the_stored_ones_at_their_decimals(client: FlaskClient, stor
         values = dict(zip(plan.result_names(), rows[plan.id].values.tolist(), strict=True))
         shown = found["units"][plan.id]["values"]
         for name, value in values.items():
-            if name.endswith(".u") or name == "unit.run_state" or math.isnan(value):
+            if name.endswith((".u", ".p")) or name == "unit.run_state" or math.isnan(value):
                 continue
             q = QUANTITIES[name.partition(".")[2]]
             expected = format_value(
