@@ -1,5 +1,7 @@
 """One MQTT payload to one reading: a JSON object with value, time and, if the plant sends it, quality.
 
+One that is marked as simulated is refused unless the site is.
+
 Pure. Whatever the bytes are, `decode` returns a reading or the reason why there is none; it never raises and
 never makes a number out of something that is not one.
 """
@@ -9,7 +11,7 @@ from datetime import datetime
 from types import MappingProxyType
 from typing import Final, NoReturn
 
-from agent.acquisition.rejection import Rejected, Rejection, check_time, value_and_word
+from agent.acquisition.rejection import SIMULATED, Rejected, Rejection, check_time, value_and_word
 from agent.records import Quality, Reading
 from agent.siteplan.plan import Input, Source
 
@@ -22,6 +24,8 @@ _QUALITIES: Final = MappingProxyType(
 # A number of seconds this large lies in the year 5138; read as milliseconds it lies in 1973.
 _MILLISECONDS_FROM: Final = 1e11
 
+_MARK: Final = "simulated"  # an invented plant says true; whatever is not false counts as such
+
 _MISSING: Final = object()
 
 
@@ -33,6 +37,8 @@ def decode(payload: bytes, entry: Input, source: Source, received_time: float) -
     """
     try:
         fields = _fields(payload)
+        if not source.takes_simulated and fields.get(_MARK, False) is not False:
+            raise Rejected(SIMULATED)
         quality = _quality(fields.get(source.quality_field, _MISSING))
         source_time = _source_time(fields.get(source.time_field, _MISSING), source.time_field)
         check_time(entry, source_time, received_time)

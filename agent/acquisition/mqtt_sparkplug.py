@@ -27,7 +27,7 @@ class MqttSparkplugSource(MqttSource[_Parcel]):
         if not source.group or set(source.group) & set("+/#"):
             raise ValueError(f"source {source.name}: {source.group!r} is no Sparkplug group")
         super().__init__(source, [f"{NAMESPACE}/{source.group}/#"], clock, session_expiry_s=0)
-        self._nodes = EdgeNodes(source.name, inputs)
+        self._nodes = EdgeNodes(source.name, inputs, takes_simulated=source.takes_simulated)
         self._on_change = frozenset(i.address for i in inputs if i.on_change)
 
     def acknowledge(self, receipts: Iterable[Receipt]) -> None:

@@ -14,6 +14,10 @@ _LARGEST: Final = 3.0e38
 _LONGEST_WORD: Final = 64
 
 
+# What an invented plant says must never stand beside what a real one says.
+SIMULATED: Final = "it is marked as simulated, and this site is not"
+
+
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Rejection:
     reason: str  # never quotes what was received

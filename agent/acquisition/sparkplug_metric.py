@@ -6,7 +6,7 @@ from typing import Final
 from agent.acquisition.rejection import Rejected, Rejection, check_time, value_and_word
 from agent.records import Quality, Reading
 from agent.siteplan.plan import Input
-from agent.sparkplug.wire import QUALITY, DataType, Metric, QualityCode
+from agent.sparkplug.wire import QUALITY, SIMULATED, UNCERTAIN, DataType, Metric, PropertyValue, QualityCode
 
 # Which field of the payload carries a type. Whole numbers: bits, and whether two's complement.
 _INTEGERS: Final = MappingProxyType(
@@ -86,19 +86,34 @@ def whole_number(metric: Metric) -> int | None:
             return None
 
 
+def is_simulated(metric: Metric) -> bool:
+    """Whether it is marked as invented; a mark that is not a plain false counts."""
+    return any(_is_set(value) for value in _properties(metric, SIMULATED))
+
+
 def _quality(metric: Metric) -> Quality:
     """Good unless the metric says otherwise."""
-    found = [
-        v for k, v in zip(metric.properties.keys, metric.properties.values, strict=False) if k == QUALITY
-    ]
-    if not found:
-        return Quality.GOOD
+    found = _properties(metric, QUALITY)
     if len(found) > 1:
         raise Rejected("the quality stands twice")
-    code = found[0].int_value if found[0].WhichOneof("value") == "int_value" else -1
-    if code not in _QUALITIES:
-        raise Rejected("the quality is not 0, 192 or 500")
-    return _QUALITIES[QualityCode(code)]
+    quality = Quality.GOOD
+    if found:
+        code = found[0].int_value if found[0].WhichOneof("value") == "int_value" else -1
+        if code not in _QUALITIES:
+            raise Rejected("the quality is not 0, 192 or 500")
+        quality = _QUALITIES[QualityCode(code)]
+    if any(_is_set(value) for value in _properties(metric, UNCERTAIN)):
+        return max(quality, Quality.UNCERTAIN)
+    return quality
+
+
+def _properties(metric: Metric, name: str) -> list[PropertyValue]:
+    pairs = zip(metric.properties.keys, metric.properties.values, strict=False)
+    return [value for key, value in pairs if key == name]
+
+
+def _is_set(value: PropertyValue) -> bool:
+    return value.WhichOneof("value") != "boolean_value" or value.boolean_value
 
 
 def _plain(metric: Metric, datatype: int) -> object:

@@ -16,8 +16,8 @@ from dataclasses import dataclass, field, replace
 from enum import StrEnum
 from typing import Final
 
-from agent.acquisition.rejection import Rejection
-from agent.acquisition.sparkplug_metric import reading_from, seconds, whole_number
+from agent.acquisition.rejection import SIMULATED, Rejection
+from agent.acquisition.sparkplug_metric import is_simulated, reading_from, seconds, whole_number
 from agent.records import Quality, Reading
 from agent.siteplan.plan import Input
 from agent.sparkplug.wire import BDSEQ, SEQUENCE, MessageType, Metric, Payload, Topic
@@ -44,6 +44,7 @@ class _Node:
     devices: set[str] = field(default_factory=set)  # those born since, "" for the node itself
     types: dict[tuple[str, str], int] = field(default_factory=dict)  # (device, metric)
     names: dict[int, tuple[str, str]] = field(default_factory=dict)  # alias -> (device, metric)
+    simulated: set[tuple[str, str]] = field(default_factory=set)  # those whose birth bears the mark
 
 
 @dataclass(slots=True, kw_only=True)
@@ -93,8 +94,9 @@ def subject_of(address: str) -> Subject:
 class EdgeNodes:
     """All edge nodes that inputs are read from; others are passed over."""
 
-    def __init__(self, source_name: str, inputs: Sequence[Input]) -> None:
+    def __init__(self, source_name: str, inputs: Sequence[Input], *, takes_simulated: bool = False) -> None:
         self._source_name = source_name
+        self._takes_simulated = takes_simulated
         self._inputs: Mapping[Subject, Input] = {subject_of(i.address): i for i in inputs}
         self._newest: dict[str, float] = {}  # address -> time of the newest reading or mark
         self.reset()
@@ -150,7 +152,7 @@ class EdgeNodes:
             return
         node.state = NodeState.ALIVE
         node.bdseq, node.sequence, node.born_at = bdseq, payload.seq, step.now
-        node.devices, node.types, node.names = set(), {}, {}
+        node.devices, node.types, node.names, node.simulated = set(), {}, {}, set()
         step.outcome.node_born = True
         self._born(step)
 
@@ -201,6 +203,7 @@ class EdgeNodes:
         node.devices.add(device)
         node.types = {key: kind for key, kind in node.types.items() if key[0] != device}
         node.names = {alias: key for alias, key in node.names.items() if key[0] != device}
+        node.simulated = {key for key in node.simulated if key[0] != device}
         for metric in step.payload.metrics:
             key = (device, metric.name)
             if not metric.HasField("name") or not metric.HasField("datatype"):
@@ -209,6 +212,8 @@ class EdgeNodes:
                 step.refuse("its alias is taken by another metric", metric.name)
             else:
                 node.types[key] = metric.datatype
+                if is_simulated(metric):
+                    node.simulated.add(key)
                 self._tell(step, metric.name, metric)
         gone = {m for n, d, m in self._inputs if (n, d) == (step.topic.node, device)}
         gone -= {m for d, m in node.types if d == device}
@@ -221,7 +226,13 @@ class EdgeNodes:
         entry = self._inputs.get((step.topic.node, step.topic.device, name))
         if entry is None or metric.is_transient:
             return
-        kind = step.node.types[step.topic.device, name]
+        key = (step.topic.device, name)
+        if not self._takes_simulated and (key in step.node.simulated or is_simulated(metric)):
+            step.refuse(SIMULATED, name)
+            if not metric.is_historical:  # what was known before is no longer said by a real plant
+                step.outcome.marks += self._marks(step.topic.node, step.now, step.topic.device, [name])
+            return
+        kind = step.node.types[key]
         if metric.HasField("datatype") and metric.datatype != kind:
             step.refuse("another datatype than its birth says", name)
             return

@@ -80,7 +80,10 @@ def _plan(reader: Reader, addresses: Mapping[str, str]) -> SitePlan | None:
         time_zone=site.time_zone,
         barometer_pa=site.barometer,
         simulated=site.simulated,
-        sources={name: _with_topics(source, plans) for name, source in sources.items()},
+        sources={
+            name: replace(_with_topics(source, plans), takes_simulated=site.simulated)
+            for name, source in sources.items()
+        },
         units=plans,
         text=text,
         digest=hashlib.sha256(text.encode()).hexdigest(),

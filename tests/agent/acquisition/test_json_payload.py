@@ -1,13 +1,14 @@
 import json
 import math
 from collections.abc import Callable
+from dataclasses import replace
 
 import pytest
 from hypothesis import HealthCheck, example, given, settings
 from hypothesis import strategies as st
 
 from agent.acquisition.json_payload import LARGEST_PAYLOAD, decode
-from agent.acquisition.rejection import FUTURE_LIMIT_S, PAST_LIMIT_S, Rejection
+from agent.acquisition.rejection import FUTURE_LIMIT_S, PAST_LIMIT_S, SIMULATED, Rejection
 from agent.records import Quality, Reading
 from agent.siteplan.plan import Input, Source, SourceKind
 
@@ -251,3 +252,18 @@ def test_what_is_sent_right_arrives_unchanged(number: Input, value: float, at: f
         return
     reading = accepted(payload, number)
     assert (reading.value, reading.source_time) == (value, NOW + at)
+
+
+@pytest.mark.parametrize("mark", ["true", "1", "0", "null", '"false"', "[]"])
+def test_what_is_marked_as_simulated_is_refused_at_a_real_site(number: Input, mark: str) -> None:
+    """A mark that is anything but a plain false counts."""
+    payload = f'{{"value": 20.5, "simulated": {mark}, {GOOD}}}'.encode()
+    assert refused(payload, number) == SIMULATED
+    assert accepted(payload, number, replace(SOURCE, takes_simulated=True)).value == 20.5
+
+
+def test_what_is_not_marked_is_taken_everywhere(number: Input) -> None:
+    for payload in (f'{{"value": 20.5, {GOOD}}}', f'{{"value": 20.5, "simulated": false, {GOOD}}}'):
+        for takes in (True, False):
+            source = replace(SOURCE, takes_simulated=takes)
+            assert accepted(payload.encode(), number, source).value == 20.5

@@ -13,6 +13,7 @@ from paho.mqtt.client import Client
 from paho.mqtt.enums import CallbackAPIVersion
 
 from agent.acquisition.build import build_source
+from agent.acquisition.rejection import SIMULATED
 from agent.clock import HandClock, SystemClock
 from agent.records import LinkState, Quality
 from agent.siteplan.plan import Input, MqttVersion, Source, SourceKind
@@ -34,7 +35,13 @@ def tags(make_input: MakeInput) -> tuple[Input, ...]:
     )
 
 
-def source(port: int, tags: tuple[Input, ...], version: MqttVersion = MqttVersion.V311) -> Any:
+def source(
+    port: int,
+    tags: tuple[Input, ...],
+    version: MqttVersion = MqttVersion.V311,
+    *,
+    takes_simulated: bool = True,
+) -> Any:
     entry = Source(
         name="plant",
         kind=SourceKind.MQTT_SPARKPLUG,
@@ -42,6 +49,7 @@ def source(port: int, tags: tuple[Input, ...], version: MqttVersion = MqttVersio
         mqtt_version=version,
         client_id="throwline-test",
         group="g",
+        takes_simulated=takes_simulated,
     )
     return build_source(entry, tags, SystemClock())
 
@@ -246,6 +254,21 @@ def test_inputs_wait_for_a_birth_after_every_connection(
                 told = [(r.source_time, r.word or r.value) for r in heard.readings[8:]]
                 assert told[:4] == [(now, 21.0), (now, "100"), (now, 1.0), (now, 2.0)]
                 assert told[4:] == [(between, 20.5), (between, "50"), (between, 1.0), (between, 1.5)]
+
+    asyncio.run(scenario())
+
+
+def test_a_real_site_takes_nothing_of_an_invented_gateway_and_says_so(
+    amqtt_plant: Any, tags: tuple[Input, ...], listening: Any, until: Any
+) -> None:
+    async def scenario() -> None:
+        async with listening(source(amqtt_plant.port, tags, takes_simulated=False)) as heard:
+            await until(lambda: is_up(heard), "up")
+            with gateway(amqtt_plant.port, tags) as wire:
+                wire.publish(instant(tags, 20.0, "100", True, 1.0))
+                await until(lambda: heard.source.status().rejected == 4, "four refusals")
+                assert heard.source.status().last_rejection.endswith(SIMULATED)
+                assert heard.readings == []
 
     asyncio.run(scenario())
 

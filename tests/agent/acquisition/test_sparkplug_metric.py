@@ -9,7 +9,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from agent.acquisition.rejection import Rejection
-from agent.acquisition.sparkplug_metric import reading_from
+from agent.acquisition.sparkplug_metric import is_simulated, reading_from
 from agent.records import Quality, Reading
 from agent.siteplan.plan import Input
 from agent.sparkplug.wire import DataType, Metric, PropertySet, PropertyValue, parsed
@@ -163,3 +163,53 @@ def test_any_bytes_give_a_reading_or_a_reason(payload: bytes, kind: int, unit: s
         if isinstance(told, Reading) and told.value is not None:
             assert math.isfinite(told.value)
             assert told.quality.usable
+
+
+def with_property(name: str, held: PropertyValue, **value: Any) -> Metric:
+    return Metric(timestamp=MS, properties=PropertySet(keys=[name], values=[held]), **value)
+
+
+TRUE = PropertyValue(type=DataType.BOOLEAN, boolean_value=True)
+FALSE = PropertyValue(type=DataType.BOOLEAN, boolean_value=False)
+
+
+@pytest.mark.parametrize(
+    ("held", "expected"),
+    [
+        (TRUE, Quality.UNCERTAIN),
+        (FALSE, Quality.GOOD),
+        (PropertyValue(type=12, string_value="no"), Quality.UNCERTAIN),
+    ],
+)
+def test_uncertain_is_a_property_beside_a_good_value(
+    tag: Input, held: PropertyValue, expected: Quality
+) -> None:
+    reading = outcome(tag, with_property("uncertain", held, float_value=20.5), DataType.FLOAT)
+    assert isinstance(reading, Reading)
+    assert (reading.value, reading.quality) == (20.5, expected)
+
+
+def test_uncertain_makes_a_bad_value_no_better(tag: Input) -> None:
+    metric = with_quality(0, float_value=20.5)
+    metric.properties.keys.append("uncertain")
+    metric.properties.values.append(TRUE)
+    reading = outcome(tag, metric, DataType.FLOAT)
+    assert isinstance(reading, Reading)
+    assert (reading.value, reading.quality) == (None, Quality.BAD)
+
+
+@pytest.mark.parametrize(
+    ("held", "expected"),
+    [
+        (TRUE, True),
+        (FALSE, False),
+        (PropertyValue(type=DataType.INT32, int_value=0), True),
+        (PropertyValue(type=DataType.STRING, string_value="false"), True),
+        (PropertyValue(type=DataType.BOOLEAN), True),
+    ],
+)
+def test_the_mark_of_the_invented_is_believed_unless_it_is_a_plain_false(
+    held: PropertyValue, expected: bool
+) -> None:
+    assert is_simulated(with_property("simulated", held)) is expected
+    assert not is_simulated(with_property("engUnit", held))

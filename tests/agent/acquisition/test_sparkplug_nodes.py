@@ -7,12 +7,22 @@ from typing import Any
 
 import pytest
 
+from agent.acquisition.rejection import SIMULATED
 from agent.acquisition.sparkplug_nodes import STEP_S, EdgeNodes, NodeState, Outcome, subject_of
 from agent.manipulation.frames import FrameBuilder
 from agent.records import Quality, Reading
 from agent.siteplan.load import load_site
 from agent.siteplan.plan import Input, UnitPlan
-from agent.sparkplug.wire import DataType, MessageType, Metric, Payload, Topic, topic_of
+from agent.sparkplug.wire import (
+    DataType,
+    MessageType,
+    Metric,
+    Payload,
+    PropertySet,
+    PropertyValue,
+    Topic,
+    topic_of,
+)
 
 SITE = Path(__file__).resolve().parents[2] / "config_errors" / "no_mistake.yaml"
 T0 = 1_800_000_000.0
@@ -31,8 +41,8 @@ def ms(at: float) -> int:
 class Gateway:
     """An edge node that speaks by the rules, unless a test makes it break one."""
 
-    def __init__(self, *inputs: Input) -> None:
-        self.nodes = EdgeNodes("plant", inputs)
+    def __init__(self, *inputs: Input, takes_simulated: bool = False) -> None:
+        self.nodes = EdgeNodes("plant", inputs, takes_simulated=takes_simulated)
         self.seq = 0
         self.bdseq = 0
 
@@ -396,3 +406,50 @@ def test_what_is_no_topic_of_an_edge_node(text: str) -> None:
 def test_topics_are_written_as_they_are_read() -> None:
     for text in ("spBv1.0/g/NBIRTH/n", "spBv1.0/g/DDATA/n/d"):
         assert str(topic_of(text)) == text
+
+
+MARK = PropertySet(keys=["simulated"], values=[PropertyValue(type=DataType.BOOLEAN, boolean_value=True)])
+
+
+def invented(at: float) -> list[Metric]:
+    return [
+        Metric(
+            name="PT", alias=1, datatype=DataType.FLOAT, timestamp=ms(at), float_value=7.0, properties=MARK
+        ),
+        Metric(
+            name="UY", alias=2, datatype=DataType.STRING, timestamp=ms(at), string_value="50", properties=MARK
+        ),
+    ]
+
+
+def test_what_is_marked_as_simulated_is_refused_at_a_real_site(gateway: Gateway) -> None:
+    gateway.node_birth(T0)
+    outcome = gateway.send(MessageType.DEVICE_BIRTH, T0, *invented(T0))
+    assert outcome.readings == []
+    assert outcome.refused == [("gw/K/PT", SIMULATED), ("gw/K/UY", SIMULATED)]
+    # data says no more than the alias: the mark of the birth holds
+    outcome = gateway.data(T0 + 1, 8.0)
+    assert (outcome.readings, outcome.refused) == ([], [("gw/K/PT", SIMULATED)])
+
+
+def test_an_invented_node_in_place_of_a_real_one_blinds_the_inputs(gateway: Gateway) -> None:
+    gateway.born(T0)
+    gateway.node_birth(T0 + 5)
+    outcome = gateway.send(MessageType.DEVICE_BIRTH, T0 + 5, *invented(T0 + 5))
+    assert outcome.readings == []
+    assert marked(outcome) == BOTH
+    gateway.born(T0 + 10, value=3.0)  # the real one again: its birth takes the mark away
+    assert values(gateway.data(T0 + 11, 4.0)) == [4.0]
+
+
+def test_a_mark_that_stands_in_the_data_alone_counts_as_well(gateway: Gateway) -> None:
+    gateway.born(T0)
+    outcome = gateway.send(MessageType.DEVICE_DATA, T0 + 1, Metric(alias=1, float_value=8.0, properties=MARK))
+    assert (outcome.readings, outcome.refused) == ([], [("gw/K/PT", SIMULATED)])
+
+
+def test_a_simulated_site_takes_what_is_marked(inputs: tuple[Input, Input]) -> None:
+    gateway = Gateway(*inputs, takes_simulated=True)
+    gateway.node_birth(T0)
+    outcome = gateway.send(MessageType.DEVICE_BIRTH, T0, *invented(T0))
+    assert (values(outcome), outcome.refused) == ([7.0, "50"], [])

@@ -205,6 +205,13 @@ def test_demo_site_is_read_in_si(ostmere: SitePlan) -> None:
     assert unit.domain.high_pressure_pa == pytest.approx(95e5)  # hand
 
 
+def test_sources_take_what_is_simulated_at_a_simulated_site_alone(ostmere: SitePlan) -> None:
+    assert {s.takes_simulated for s in ostmere.sources.values()} == {True}
+    real = load_site(PLAIN)
+    assert not real.simulated
+    assert {s.takes_simulated for s in real.sources.values()} == {False}
+
+
 def test_merge_key_gives_the_second_cylinder_the_sizes_of_the_first(ostmere: SitePlan) -> None:
     first, second = ostmere.unit("K-110").unit.stages[0].cylinders
     assert (first.number, second.number) == (1, 2)
