@@ -21,6 +21,7 @@ AVERAGED: Final = 5  # turns; at rest one turn is like the next
 MOST: Final = 240  # turns
 _FOLLOW: Final = 3  # turns in which passages and cylinders follow the bottles
 _MEMORY: Final = 6
+_PATIENCE: Final = 25
 _LARGEST_STEP: Final = 0.05
 _SINGULAR: Final = 1e-4
 
@@ -89,7 +90,11 @@ class Settler:
         states: list[Floats] = []
         moves: list[Floats] = []
         quiet = 0
-        for _ in range(MOST):
+        for done in range(MOST):
+            if done % _PATIENCE == _PATIENCE - 1:  # extrapolation goes round a kink: a while without it
+                machine.hasten(_PATIENCE)
+                self.turns += _PATIENCE
+                states, moves = [], []
             before = machine.slow
             machine.hasten(1)
             self.turns += 1
