@@ -5,6 +5,7 @@ what the last few turns have shown of its way (Anderson mixing), from a start th
 points settled before foretells. It comes to the same state as `Machine.settle`, in a third of the turns.
 """
 
+import math
 from typing import Final
 
 import numpy as np
@@ -18,10 +19,11 @@ from simulator.polynomial import basis, total_degree
 
 AT_REST: Final = 2e-5  # change of any part of the slow state in a turn
 AVERAGED: Final = 5  # turns; at rest one turn is like the next
-MOST: Final = 240  # turns
+RESTLESS: Final = 40  # turns averaged of a machine whose plates flutter
+FLUTTER: Final = 0.02  # largest change in ten turns that is still flutter
+_BLOCK: Final = 10  # turns
 _FOLLOW: Final = 3  # turns in which passages and cylinders follow the bottles
-_MEMORY: Final = 6
-_PATIENCE: Final = 25
+_PLANS: Final = ((1, 24, 6), (6, 16, 3))  # turns at once, how often, states remembered
 _LARGEST_STEP: Final = 0.05
 _SINGULAR: Final = 1e-4
 
@@ -56,20 +58,19 @@ class Settler:
         Returns
         -------
         MachineOutcome
-            Means over `AVERAGED` turns.
+            Means over `AVERAGED` turns, or over `RESTLESS` where plates flutter.
 
         Raises
         ------
         NotSettledError
-            `MOST` turns were not enough.
+            Bottles or walls still wander.
         """
         self.machine.change(around=around, faults=faults)
         start = self._foretold(point)
         if start is not None:
             self.machine.place(start)
-        self._rest()
-        outcome = self.machine.hasten(AVERAGED)
-        self.turns += AVERAGED
+        turns = AVERAGED if self._rest() else RESTLESS
+        outcome = self._turn(turns)
         self._points.append(point)
         self._states.append(self.machine.slow)
         return outcome
@@ -83,28 +84,43 @@ class Settler:
                 return np.asarray(basis(point[None], powers)[0] @ weights)
         return None
 
-    def _rest(self) -> None:
+    def _turn(self, turns: int) -> MachineOutcome:
+        self.turns += turns
+        return self.machine.hasten(turns)
+
+    def _rest(self) -> bool:
+        """Bring the machine to rest; False if its plates flutter and it has none, yet wanders no further.
+
+        Turn by turn first. That goes round a kink, such as a plate that just touches its stop, for ever; so
+        next in blocks of turns, in which all dies away but the slowest mode: gas shut in an idle end.
+        """
+        self._turn(_FOLLOW)
+        if any(self._extrapolated(*plan) < plan[0] * AT_REST for plan in _PLANS):
+            return True
+        before = self.machine.slow
+        self._turn(_BLOCK)
+        move = float(np.abs(self.machine.slow - before).max())
+        if move > FLUTTER:
+            raise NotSettledError(self.machine.unit.id, sum(turns * most for turns, most, _ in _PLANS))
+        return move < AT_REST * _BLOCK
+
+    def _extrapolated(self, turns: int, most: int, memory: int) -> float:
+        """Turn and extrapolate until at rest; the last move."""
         machine = self.machine
-        machine.hasten(_FOLLOW)
-        self.turns += _FOLLOW
         states: list[Floats] = []
         moves: list[Floats] = []
-        quiet = 0
-        for done in range(MOST):
-            if done % _PATIENCE == _PATIENCE - 1:  # extrapolation goes round a kink: a while without it
-                machine.hasten(_PATIENCE)
-                self.turns += _PATIENCE
-                states, moves = [], []
+        quiet, largest = 0, math.inf
+        for _ in range(most):
             before = machine.slow
-            machine.hasten(1)
-            self.turns += 1
+            self._turn(turns)
             move = machine.slow - before
-            quiet = quiet + 1 if np.abs(move).max() < AT_REST else 0
-            if quiet > 1:
-                return
-            states, moves = [*states[1 - _MEMORY :], before], [*moves[1 - _MEMORY :], move]
+            largest = float(np.abs(move).max())
+            quiet = quiet + 1 if largest < turns * AT_REST else 0
+            if quiet > (turns == 1):
+                break
+            states, moves = [*states[1 - memory :], before], [*moves[1 - memory :], move]
             machine.place(before + _mixed(states, moves))
-        raise NotSettledError(machine.unit.id, MOST)
+        return largest
 
 
 def _mixed(states: list[Floats], moves: list[Floats]) -> Floats:
