@@ -11,7 +11,7 @@ import pytest
 from agent.database import JOURNAL_FILE, SERIES_FILE, StoreFullError
 from agent.journal.sqlite import JournalReader, JournalWriter
 from agent.pipeline import BACKLOG_TICKS, Pipeline, input_columns, result_columns
-from agent.records import Commit, LinkState, Quality, Reading, Receipt, SourceStatus
+from agent.records import Commit, EventKind, LinkState, Quality, Reading, Receipt, SourceStatus
 from agent.siteplan.load import load_site
 from agent.siteplan.plan import SWITCH, WORD, SitePlan
 from agent.storage.sqlite_series import SeriesReader, SeriesWriter
@@ -149,6 +149,34 @@ def test_seconds_slept_through_go_the_late_way(rig: Rig) -> None:
     receipts = rig.pipeline.commit_late()
     assert len(receipts) == 299 * len(rig.plan.inputs)
     assert set(range(START + 1, START + 301)) <= set(rig.stored())
+
+
+def test_what_a_lost_link_kept_is_stored_and_never_alarms(rig: Rig) -> None:
+    """Eighty hot seconds that come late are in the rows and raise nothing; live they do, after sixty."""
+
+    def hot(at: float) -> list[Reading]:
+        return [replace(r, value=160.0) if r.address.endswith("TT-1102") else r for r in rig.readings(at)]
+
+    def temperatures(first: int, end: int) -> list[float]:
+        _, values, _ = rig.reader.range("K-110", [name], START + first, START + end)
+        return [float(v) for v in values[:, 0]]
+
+    name = rig.plan.input_names()[[i.tag for i in rig.plan.inputs].index("TT-1102")]
+    for t in range(1, 20):
+        rig.second(START + t)
+    for t in range(20, 100):
+        rig.pipeline.tick(START + t + 0.6, (UP,))
+    rig.pipeline.accept([r for t in range(20, 100) for r in hot(START + t - 0.4)], START + 99.7)
+    rig.pipeline.commit_late()
+    for t in range(100, 105):
+        rig.second(START + t)
+    assert temperatures(20, 100) == pytest.approx([160.0 + 273.15] * 80)
+    assert EventKind.RAISED not in {e.kind for e in rig.journal_reader.events()}
+    for t in range(105, 185):
+        rig.pipeline.accept(hot(START + t - 0.4), START + t - 0.3)
+        rig.pipeline.tick(START + t + 0.6, (UP,))
+    raised = {e.alarm for e in rig.journal_reader.events() if e.kind is EventKind.RAISED}
+    assert raised == {"discharge_temperature"}
 
 
 def test_rows_stored_but_not_judged_are_judged_at_the_next_start(

@@ -84,6 +84,10 @@ def test_the_peer_reads_what_the_plant_sends(port: int, start_peer: Any) -> None
         assert metric["timestamp"] == round(START * 1000)
         assert metric["properties"]["engUnit"] == {"type": "String", "value": tag.unit}
         assert metric["value"] == as_sent(tag, VALUES[tag.quantity])
+    for metric in (*device["metrics"], *kept["metrics"], *data["metrics"]):
+        code = 0 if metric["value"] is None else 192
+        assert metric["properties"]["Quality"] == {"type": "Int32", "value": code}
+        assert metric["properties"]["simulated"] == {"type": "Boolean", "value": True}
     later = {by_tag[names[m["alias"]]].quantity: m["value"] for m in data["metrics"]}
     assert later == {"suction_pressure": None, "load_step": "half", "flow": -1234.56}
     assert {m["timestamp"] for m in data["metrics"]} == {round((START + 1) * 1000)}

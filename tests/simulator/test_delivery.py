@@ -3,6 +3,7 @@
 from collections import Counter
 from dataclasses import replace
 from itertools import pairwise
+from pathlib import Path
 
 import pytest
 from hypothesis import given, settings
@@ -11,10 +12,10 @@ from hypothesis import strategies as st
 from agent.siteplan.load import load_site
 from simulator.delivery import SHUFFLE_S, Delivery
 from simulator.instrument_faults import LinkState
-from simulator.plant_main import scenario_path
 from simulator.sample import Sample
 
-TAGS = load_site(scenario_path("quiet").parents[1] / "sites" / "ostmere.yaml").units[0].inputs[:3]
+SITE = Path(__file__).resolve().parents[2] / "simulator" / "sites" / "ostmere.yaml"
+TAGS = load_site(SITE).units[0].inputs[:3]
 GOOD = LinkState()
 LOST = LinkState(lost=True)
 KEPT = LinkState(lost=True, buffered=True)

@@ -17,14 +17,13 @@ from agent.siteplan.plan import Input
 from agent.sparkplug.wire import Metric
 from simulator.delivery import Delivery
 from simulator.instrument_faults import LinkState, SampleQuality
-from simulator.plant_main import scenario_path
 from simulator.sample import Sample
 from simulator.serve_mqtt import MqttWire, payload
 from simulator.serve_opcua import NAMESPACE, OpcuaWire
 from simulator.serve_sparkplug import SparkplugWire, put_properties
 from tests.simulator.wires import ROOT, Broker, Host, Subscriber, free_port, until
 
-SITE = scenario_path("quiet").parents[1] / "sites" / "ostmere.yaml"
+SITE = ROOT / "simulator" / "sites" / "ostmere.yaml"
 PLAIN = load_site(ROOT / "tests" / "config_errors" / "no_mistake.yaml").units[0]
 NOW = 1_800_000_000.4
 MS = 1_800_000_000_400
