@@ -12,7 +12,7 @@ from asyncua.common.node import Node
 
 from agent.siteplan.plan import Input, UnitPlan
 from simulator.instrument_faults import SampleQuality
-from simulator.opcua_history import HourOfHistory
+from simulator.opcua_history import KEPT, HourOfHistory
 from simulator.sample import Sample
 
 NAMESPACE: Final = "urn:ostmere:plant"
@@ -49,6 +49,7 @@ class OpcuaWire:
         server.iserver.history_manager.set_storage(self._history)
         index = await server.register_namespace(NAMESPACE)
         await self._populate(server, index)
+        await _tell_history(server)
         await server.start()
         self._server = server
         return self
@@ -132,6 +133,37 @@ class OpcuaWire:
         await node.set_attr_bit(ua.AttributeIds.UserAccessLevel, ua.AccessLevel.HistoryRead)
         self._history.add(node_id, kind)
         self._nodes[tag.address] = node_id
+
+
+async def _tell_history(server: Server) -> None:
+    """What a client may ask of the past: raw values of up to an hour, and nothing may be changed."""
+    for name, value in _HISTORY.items():
+        node = server.get_node(
+            ua.NodeId(ua.Int32(getattr(ua.ObjectIds, f"HistoryServerCapabilities_{name}")))
+        )
+        kind = ua.VariantType.Boolean if isinstance(value, bool) else ua.VariantType.UInt32
+        await server_side_write(node, ua.DataValue(ua.Variant(value, kind)))
+
+
+_HISTORY: Final = MappingProxyType(
+    {
+        "AccessHistoryDataCapability": True,
+        "AccessHistoryEventsCapability": False,
+        "MaxReturnDataValues": KEPT,
+        "MaxReturnEventValues": 0,
+        "InsertDataCapability": False,
+        "ReplaceDataCapability": False,
+        "UpdateDataCapability": False,
+        "DeleteRawCapability": False,
+        "DeleteAtTimeCapability": False,
+        "InsertEventCapability": False,
+        "ReplaceEventCapability": False,
+        "UpdateEventCapability": False,
+        "DeleteEventCapability": False,
+        "InsertAnnotationCapability": False,
+        "ServerTimestampSupported": True,
+    }
+)
 
 
 async def _make_analog(node: Node) -> None:
