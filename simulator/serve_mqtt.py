@@ -44,6 +44,10 @@ class MqttWire:
     def up(self) -> bool:
         return self._link.up
 
+    @property
+    def is_cut(self) -> bool:
+        return self._link.is_cut
+
     def open(self) -> None:
         if self._ledger_path is not None:
             self._ledger = self._ledger_path.open("a", encoding="utf-8")

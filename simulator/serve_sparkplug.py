@@ -77,6 +77,10 @@ class SparkplugWire:
     def up(self) -> bool:
         return self._link.up
 
+    @property
+    def is_cut(self) -> bool:
+        return self._link.is_cut
+
     def open(self) -> None:
         self._link.open()
 

@@ -182,6 +182,7 @@ def test_a_cut_gateway_dies_and_is_born_anew_with_its_past(gateway: tuple[Host, 
     for n in (1, 2, 3):
         assert not link.update(NOW + n, lot(n), LOST)
     wire.restore()
+    assert not wire.is_cut
     until(lambda: wire.up)
     wire.publish(link.update(NOW + 4, lot(4), LinkState()))
     messages = host.take(5)
