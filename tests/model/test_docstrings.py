@@ -8,8 +8,9 @@ from collections.abc import Callable, Iterator
 import pytest
 
 MODULES = (
-    "budget", "curves", "cycle", "dew", "evaluate", "gas", "jacobian", "kinematics", "margins", "monte_carlo",
-    "propagation", "rodload", "stage", "surface", "throw", "uncertainty", "valves",
+    "budget", "calibration", "curves", "cycle", "dew", "evaluate", "gas", "jacobian", "kinematics", "margins",
+    "monte_carlo", "nuisances", "propagation", "rodload", "stage", "surface", "teaching", "throw",
+    "uncertainty", "valves",
 )  # fmt: skip
 NUMBERS = re.compile(r"^(float|array_like|ndarray(?! of bool)|int|sequence of float)\b")
 UNIT = re.compile(r"\[[^\]]+\]")
