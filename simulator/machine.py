@@ -1,7 +1,8 @@
 """The invented machine itself: a state that turns of the crank move on. Importing this loads the compiler."""
 
+import copy
 import math
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import replace
 from typing import Final
 
@@ -98,6 +99,7 @@ class Machine:
         self._cooled_k = np.full(stages, self.around.cooling_water_k + 5.0)
         self._line_flow = np.full(stages, self.equipment.design_flow_mol_s)
         self._load = 0.8
+        self._hurry = 1.0
         self._fill()
         self._apply()
         self._last: Run | None = None
@@ -111,9 +113,32 @@ class Machine:
             self.around = around
         self._apply()
 
-    def run(self, turns: int) -> MachineOutcome:
-        """Turn the crank, walls lagging as metal does; means over these turns."""
+    def twin(self) -> "Machine":
+        """Another machine in the same state, which goes its own way from here."""
+        other = copy.copy(self)
+        for name, value in vars(self).items():
+            if isinstance(value, np.ndarray):
+                setattr(other, name, value.copy())
+        other._apply()  # noqa: SLF001 - another of its own kind
+        return other
+
+    def run(self, turns: int, *, hurry: float = 1.0) -> MachineOutcome:
+        """Turn the crank, walls lagging as metal does; means over these turns.
+
+        ``hurry`` is how many times faster the metal warms and cools than the crank's own time goes.
+        """
+        self._hurry = hurry
         return self._turns(turns, None)
+
+    @property
+    def wall_k(self) -> Floats:
+        """Temperature of each end's metal [K]."""
+        return self._wall.copy()
+
+    def set_walls(self, wall_k: Sequence[float]) -> None:
+        """Take up with the metal at other temperatures, as after a stop [K]."""
+        self._wall[:] = wall_k
+        self._turning["wall_temperature"] = self._wall
 
     def settle(self, *, most: int = 400, averaged: int = _BLOCK) -> MachineOutcome:
         """Turn until bottles and walls repeat, walls hastened; means over the last ``averaged`` turns.
@@ -295,7 +320,7 @@ class Machine:
         film, heat = sums[:, WALL_AREA], sums[:, WALL_AREA_HEAT]
         jacket = self._jacket * period
         aim = (heat + jacket * self.around.jacket_water_k) / (film + jacket)
-        share = 1.0 - math.exp(-period / WALL_LAG_S) if relax is None else relax
+        share = 1.0 - math.exp(-self._hurry * period / WALL_LAG_S) if relax is None else relax
         self._wall += share * (aim - self._wall)
         self._turning["wall_temperature"] = self._wall
         self._line_flow = flows[LINES : LINES + len(self.unit.stages), 0] / period

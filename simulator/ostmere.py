@@ -1,6 +1,7 @@
 """The plant of Ostmere Works around each compressor: invented vessels, coolers, drivers and header states.
 
-None of this is in the agent's site file: an agent knows what is on the nameplate and what its tags say.
+None of this is in the agent's site file: an agent knows what is on the nameplate and what its tags say. The
+nameplates themselves are those of the site file.
 """
 
 import math
@@ -8,69 +9,11 @@ from collections.abc import Mapping
 from types import MappingProxyType
 from typing import Final
 
-from model.machine import Cylinder, End, GasDomain, LoadStep, Side, Stage, Unit
 from simulator.equipment import Driver, DriverKind, Equipment, StageEquipment, Surroundings
 
 _RPM: Final = 2.0 * math.pi / 60.0
 _BAR: Final = 1e5
 SEED: Final = 20_417  # of the sealed draw of this site
-
-
-def _k330_cylinder(
-    number: int, bore: float, mass: float, clearance: tuple[float, float], areas: tuple[float, float]
-) -> Cylinder:
-    head, crank = clearance
-    suction, discharge = areas
-    return Cylinder(
-        number=number, bore_m=bore, rod_diameter_m=0.064, reciprocating_mass_kg=mass,
-        valve_natural_frequency_hz=130.0,
-        ends=(
-            End(side=Side.HEAD, clearance=head, suction_area_ratio=suction, discharge_area_ratio=discharge),
-            End(side=Side.CRANK, clearance=crank, suction_area_ratio=suction, discharge_area_ratio=discharge),
-        ),
-    )  # fmt: skip
-
-
-def _every(side: Side) -> frozenset[tuple[int, Side]]:
-    return frozenset((number, side) for number in (1, 2, 3, 4))
-
-
-K330: Final = Unit(
-    id="K-330",
-    name="Field gas compressor",
-    service="natural gas, two stages, four throws, induction motor",
-    stroke_m=0.165,
-    connecting_rod_m=0.42,
-    rated_speed_rad_s=750.0 * _RPM,
-    ambient_pressure_pa=1.013e5,
-    composition=MappingProxyType(
-        {
-            "methane": 0.900,
-            "ethane": 0.050,
-            "propane": 0.015,
-            "n-butane": 0.005,
-            "nitrogen": 0.015,
-            "carbon dioxide": 0.015,
-        }
-    ),
-    domain=GasDomain(
-        low_temperature_k=273.15, high_temperature_k=448.15, low_pressure_pa=1e5, high_pressure_pa=50 * _BAR
-    ),
-    stages=(
-        Stage(
-            number=1,
-            cylinders=tuple(_k330_cylinder(n, 0.400, 300.0, (0.14, 0.16), (0.065, 0.060)) for n in (1, 2)),
-        ),
-        Stage(
-            number=2,
-            cylinders=tuple(_k330_cylinder(n, 0.265, 260.0, (0.15, 0.17), (0.060, 0.055)) for n in (3, 4)),
-        ),
-    ),
-    load_steps=(
-        LoadStep(word="100", index=0, held_open=frozenset()),
-        LoadStep(word="50", index=1, held_open=_every(Side.HEAD)),
-    ),
-)
 
 
 EQUIPMENT: Final[Mapping[str, Equipment]] = MappingProxyType(

@@ -4,17 +4,32 @@ from pathlib import Path
 
 import pytest
 
+from agent.siteplan.load import load_site
+from model.machine import Side
+from simulator.course import Calm, UnitOrders
+from simulator.faults import FaultKind
+from simulator.instrument_faults import InstrumentFaultKind, LinkState
+from simulator.ostmere import USUAL
 from simulator.plant_main import scenario_path
 from simulator.scenario import Scenario, ScenarioError, load_scenario
-from simulator.steady_table import BAR, MACHINES
 
-RATED = MACHINES["K-110"].rated
+BAR = 1e5
+SITE = load_site(scenario_path("quiet").parents[1] / "sites" / "ostmere.yaml")
 
 
 def scenario(folder: Path, text: str) -> Scenario:
     path = folder / "story.yaml"
     path.write_text(text, encoding="utf-8")
-    return load_scenario(path, MACHINES)
+    return load_scenario(path, SITE)
+
+
+def calm(unit: str) -> Calm:
+    return Calm(around=USUAL[unit], load_step=SITE.unit(unit).unit.load_steps[0].word)
+
+
+def orders(story: Scenario, unit: str, elapsed_s: float, pace: float = 1.0) -> UnitOrders:
+    told = story.at_pace(pace)
+    return told.units[unit].orders(told.round_time(elapsed_s), calm(unit))
 
 
 def changes(*lines: str) -> str:
@@ -25,7 +40,7 @@ SINK = "at: 20 s, unit: K-110, variable: suction_header_pressure, to: 26 bara, o
 
 
 def suction_bar(story: Scenario, elapsed_s: float, pace: float = 1.0) -> float:
-    return story.conditions("K-110", RATED, elapsed_s, pace).suction_header_pa / BAR
+    return orders(story, "K-110", elapsed_s, pace).around.suction_pressure_pa / BAR
 
 
 def test_ramp_is_straight_from_the_value_before_to_the_value_asked_for(tmp_path: Path) -> None:
@@ -51,14 +66,13 @@ def test_pace_divides_times_but_not_what_alarms_wait_for(tmp_path: Path) -> None
     late = "at: 300 s, unhurried: 100 s, unit: K-110, variable: running, to: false"
     story = scenario(tmp_path, changes(SINK, late))
     assert suction_bar(story, 6.0, pace=4.0) == pytest.approx(29.6)  # hand: 1 of 10 s of the hurried ramp
-    running = [story.conditions("K-110", RATED, t, 4.0).running for t in (149.9, 150.1)]
+    running = [orders(story, "K-110", t, 4.0).running for t in (149.9, 150.1)]
     assert running == [True, False]  # hand: (300 - 100) / 4 + 100 = 150 s
 
 
 def test_one_unit_is_left_alone_by_the_changes_of_another(tmp_path: Path) -> None:
     story = scenario(tmp_path, changes(SINK))
-    rated = MACHINES["K-220"].rated
-    assert story.conditions("K-220", rated, 100.0, 1.0) == rated
+    assert orders(story, "K-220", 100.0) == orders(story, "K-220", -1.0)
 
 
 def test_repeated_story_starts_again(tmp_path: Path) -> None:
@@ -68,7 +82,7 @@ def test_repeated_story_starts_again(tmp_path: Path) -> None:
 
 FAULTS = [
     pytest.param("title: t\nchanges: [", "is not YAML", id="broken YAML"),
-    pytest.param("title: t\n", "changes: Field required", id="no changes"),
+    pytest.param("changes: []\n", "title: Field required", id="no title"),
     pytest.param(
         "title: t\nchanges: []\nchnages: []\n", "chnages: Extra inputs are not permitted", id="unknown key"
     ),
@@ -110,7 +124,7 @@ FAULTS = [
     ),
     pytest.param(
         changes("at: 20 s, unit: K-990, variable: running, to: false"),
-        "unit: 'K-990' is no machine of this plant; known: K-110, K-220, K-330",
+        "unit: 'K-990' is no unit of this site; known: K-110, K-220, K-330",
         id="unknown unit",
     ),
     pytest.param(
@@ -155,7 +169,7 @@ def test_every_fault_is_listed_at_once(tmp_path: Path) -> None:
 
 def test_missing_file_is_named(tmp_path: Path) -> None:
     with pytest.raises(ScenarioError, match=r"nowhere\.yaml: cannot be read: No such file"):
-        load_scenario(tmp_path / "nowhere.yaml", MACHINES)
+        load_scenario(tmp_path / "nowhere.yaml", SITE)
 
 
 SHIPPED = sorted(p.stem for p in scenario_path("quiet").parent.glob("*.yaml"))
@@ -163,34 +177,140 @@ SHIPPED = sorted(p.stem for p in scenario_path("quiet").parent.glob("*.yaml"))
 
 @pytest.mark.parametrize("name", SHIPPED)
 @pytest.mark.parametrize("pace", [1.0, 3.0, 20.0])
-def test_shipped_story_ends_where_it_began(name: str, pace: float) -> None:
+def test_shipped_story_that_repeats_ends_where_it_began(name: str, pace: float) -> None:
     """A round hands the plant on as it found it, at any pace; a story told once may end elsewhere."""
-    story = load_scenario(scenario_path(name), MACHINES)
-    length = 1e6 if story.repeat is None else story.repeat.real_s(pace) - 0.5
-    for unit, machine in MACHINES.items():
-        assert story.conditions(unit, machine.rated, length, pace) == machine.rated
+    story = load_scenario(scenario_path(name), SITE)
+    length = story.at_pace(pace).repeats_after_s
+    if length is None:
+        return
+    for unit in SITE.units:
+        assert orders(story, unit.id, length - 0.5, pace) == orders(story, unit.id, -1.0, pace)
 
 
 def test_first_light_gives_each_alarm_the_time_it_waits_at_any_pace() -> None:
     """Alarms wait 60 s in real time: low suction and the wrong ends must last that long however hurried."""
-    story = load_scenario(scenario_path("first-light"), MACHINES)
-    rated = MACHINES["K-220"].rated
+    story = load_scenario(scenario_path("first-light"), SITE)
     for pace in (0.5, 1.0, 3.0, 10.0, 60.0):
-        length = int(story.repeat.real_s(pace)) if story.repeat else 0
+        length = int(story.at_pace(pace).repeats_after_s or 0)
         low = sum(suction_bar(story, t, pace) < 25 for t in range(length))
-        wrong = sum(
-            story.conditions("K-220", rated, t, pace).load_step == "50-crank-open" for t in range(length)
-        )
+        wrong = sum(orders(story, "K-220", t, pace).load_step == "50-crank-open" for t in range(length))
         assert low > 75
         assert wrong > 75
 
 
 def test_first_light_order_is_that_of_its_timetable_at_pace_one() -> None:
-    story = load_scenario(scenario_path("first-light"), MACHINES)
-    said = [text for _, text in story.real_timetable(1.0)]
+    told = load_scenario(scenario_path("first-light"), SITE).at_pace(1.0).timetable()
+    said = [text for _, text in told]
     loads, reversal, temperature = (
         next(i for i, text in enumerate(said) if word in text)
         for word in ("alarm for gas rod load", "alarm for load reversal", "alarm for discharge temperature")
     )
     assert loads < reversal < temperature
-    assert story.real_timetable(1.0)[loads][0] <= 150  # the first alarm within three minutes of the start
+    assert told[loads][0] <= 150  # the first alarm within three minutes of the start
+
+
+# -- faults, instruments, links, gases
+
+
+LEAK = "at: 10 s, unit: K-220, fault: suction valve leak, cylinder: 3, end: head, to: 0.002, over: 100 s"
+
+
+def test_fault_grows_and_is_repaired(tmp_path: Path) -> None:
+    mended = "at: 200 s, unit: K-220, fault: suction valve leak, cylinder: 3, end: head, to: 0"
+    story = scenario(tmp_path, f"title: t\nfaults:\n  - {{{LEAK}}}\n  - {{{mended}}}\n")
+    sizes = [
+        orders(story, "K-220", t).faults.at_end(FaultKind.SUCTION_VALVE_LEAK, 3, Side.HEAD)
+        for t in (0, 10, 60, 110, 150, 201)
+    ]
+    assert sizes == pytest.approx([0, 0, 0.001, 0.002, 0.002, 0])  # hand
+    assert orders(story, "K-110", 60).faults.present == ()
+
+
+def test_exponential_growth_is_slow_at_first(tmp_path: Path) -> None:
+    story = scenario(tmp_path, f"title: t\nfaults:\n  - {{{LEAK}, growth: exponential}}\n")
+    half, whole = (
+        orders(story, "K-220", t).faults.at_end(FaultKind.SUCTION_VALVE_LEAK, 3, Side.HEAD) for t in (60, 110)
+    )
+    assert half == pytest.approx(0.002 * 0.1824, rel=1e-3)  # hand: (e^1.5 - 1) / (e^3 - 1)
+    assert whole == pytest.approx(0.002)
+
+
+def test_instrument_drifts_in_the_unit_of_its_tag(tmp_path: Path) -> None:
+    lines = (
+        "at: 0 s, unit: K-220, tag: PT-2203, fault: bias, to: -1 bar, over: 10 s",
+        "at: 0 s, unit: K-220, tag: TT-2202, fault: spikes, to: 5 degC",
+        "at: 20 s, unit: K-220, tag: PT-2203, fault: stuck, to: true",
+        "at: 0 s, unit: K-220, tag: PT-2204, fault: wrong span, to: 1.05",
+    )
+    story = scenario(tmp_path, "title: t\ninstruments:\n" + "".join(f"  - {{{x}}}\n" for x in lines))
+    course = story.at_pace(1.0).units["K-220"]
+    assert [f.size for f in course.instrument_faults("PT-2203", 5.0)] == pytest.approx([-0.5e5])  # hand
+    assert [f.size for f in course.instrument_faults("TT-2202", 5.0)] == pytest.approx([5.0])
+    assert [f.size for f in course.instrument_faults("PT-2204", 5.0)] == pytest.approx([1.05])
+    kinds = {f.kind for f in course.instrument_faults("PT-2203", 25.0)}
+    assert kinds == {InstrumentFaultKind.BIAS, InstrumentFaultKind.STUCK}
+    assert course.instrument_faults("PT-2205", 25.0) == ()
+
+
+def test_link_is_lost_for_its_time(tmp_path: Path) -> None:
+    lines = (
+        "at: 60 s, source: field-bus, fault: lost, for: 2 min, buffered: true",
+        "at: 10 s, source: control-system, fault: skewed, for: 1 h, by: -45 s",
+        "at: 10 s, source: field-gateway, fault: late, for: 20 s, by: 5 s",
+    )
+    told = scenario(tmp_path, "title: t\nlinks:\n" + "".join(f"  - {{{x}}}\n" for x in lines)).at_pace(1.0)
+    assert [told.link("field-bus", t).lost for t in (59, 61, 179, 181)] == [False, True, True, False]
+    assert told.link("field-bus", 61).buffered
+    assert told.link("control-system", 61) == LinkState(skew_s=-45.0)
+    assert told.link("field-gateway", 15) == LinkState(delay_s=5.0)
+    assert told.link("field-gateway", 31) == LinkState()
+
+
+def test_gas_mixes_over_to_another(tmp_path: Path) -> None:
+    line = "at: 0 s, unit: K-220, variable: composition, to: {hydrogen: 0.8, methane: 0.2}, over: 10 s"
+    story = scenario(tmp_path, changes(line)).at_pace(1.0).units["K-220"]
+    pure = {"hydrogen": 1.0}
+    assert story.composition(5.0, pure) == pytest.approx({"hydrogen": 0.9, "methane": 0.1})  # hand
+    assert story.composition(20.0, pure) == pytest.approx({"hydrogen": 0.8, "methane": 0.2})
+
+
+WRONG = [
+    ("faults", "at: 0 s, unit: K-220, fault: rust, to: 1", "faults[0].fault"),
+    (
+        "faults",
+        "at: 0 s, unit: K-220, fault: piston ring leak, cylinder: 3, end: head, to: 0.001",
+        "must name its cylinder and nothing else",
+    ),
+    (
+        "faults",
+        "at: 0 s, unit: K-220, fault: piston ring leak, cylinder: 9, to: 0.001",
+        "K-220 has no cylinder 9",
+    ),
+    ("faults", "at: 0 s, unit: K-220, fault: piston ring leak, cylinder: 3, to: 7", "is not within 0..0.05"),
+    ("instruments", "at: 0 s, unit: K-220, tag: PT-1, fault: bias, to: 1 bar", "K-220 has no 'PT-1'"),
+    (
+        "instruments",
+        "at: 0 s, unit: K-220, tag: PT-2203, fault: bias, to: true",
+        "expected a difference with a unit",
+    ),
+    ("instruments", "at: 0 s, unit: K-220, tag: PT-2203, fault: stuck, to: 1 bar", "expected true or false"),
+    (
+        "instruments",
+        "at: 0 s, unit: K-220, tag: PT-2203, fault: wrong span, to: true",
+        "expected a factor such as 1.05",
+    ),
+    ("links", "at: 0 s, source: pigeon, fault: lost, for: 1 h", "'pigeon' is no source of this site"),
+    ("links", "at: 0 s, source: field-bus, fault: late, for: 1 h", "needs to say by how much"),
+    (
+        "changes",
+        "at: 0 s, unit: K-220, variable: composition, to: {hydrogen: 0.5}",
+        "are not shares of one",
+    ),
+]
+
+
+@pytest.mark.parametrize(("section", "line", "said"), WRONG, ids=lambda x: str(x)[:40])
+def test_wrong_entry_says_what_is_wrong(tmp_path: Path, section: str, line: str, said: str) -> None:
+    with pytest.raises(ScenarioError) as caught:
+        scenario(tmp_path, f"title: t\n{section}:\n  - {{{line}}}\n")
+    assert said in str(caught.value)

@@ -23,7 +23,6 @@ from simulator.sample import Sample
 from simulator.scenario import load_scenario
 from simulator.serve_mqtt import MqttWire, payload
 from simulator.serve_opcua import NAMESPACE, OpcuaWire, unit_id
-from simulator.steady_table import MACHINES
 from tests.simulator.wires import Broker, Subscriber, free_port, until
 
 SITE = scenario_path("quiet").parents[1] / "sites" / "ostmere.yaml"
@@ -50,7 +49,7 @@ def site(mqtt: int = 1, opcua: int = 1) -> SitePlan:
 
 
 def samples(plan: SitePlan, source: str, at: float = NOW) -> list[Sample]:
-    plant = Plant(plan, load_scenario(scenario_path("quiet"), MACHINES), MACHINES, pace=1.0, seed=1)
+    plant = Plant(plan, load_scenario(scenario_path("quiet"), plan), pace=1.0, seed=1, steps=720)
     return [s for s in plant.sample(at, None) if s.tag.source == source]
 
 

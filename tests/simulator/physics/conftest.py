@@ -6,6 +6,7 @@ import math
 import os
 from collections.abc import Callable, Mapping
 from dataclasses import replace
+from importlib.resources import files
 from pathlib import Path
 
 import pytest
@@ -13,6 +14,7 @@ import pytest
 # Machine code of the plant is kept between test runs; a change of its sources makes it anew.
 os.environ.setdefault("NUMBA_CACHE_DIR", str(Path(__file__).parents[3] / ".pytest_cache" / "plant"))
 
+from agent.siteplan.load import load_site
 from model.machine import Cylinder, End, GasDomain, Side, Stage, Unit
 from simulator.equipment import (
     NOMINAL,
@@ -25,7 +27,7 @@ from simulator.equipment import (
 )
 from simulator.faults import Fault, Faults
 from simulator.machine import Machine
-from simulator.ostmere import EQUIPMENT, K330, USUAL
+from simulator.ostmere import EQUIPMENT, USUAL
 from simulator.outcome import MachineOutcome
 
 NATURAL_GAS: Mapping[str, float] = {
@@ -104,7 +106,12 @@ def _k220() -> Unit:
     return unit("K-220", HYDROGEN_RICH, 0.32, 0.80, 375.0, (first, second, third))
 
 
-UNITS: Mapping[str, Callable[[], Unit]] = {"K-110": _k110, "K-220": _k220, "K-330": lambda: K330}
+@functools.cache
+def _k330() -> Unit:
+    return load_site(Path(str(files("simulator") / "sites" / "ostmere.yaml"))).unit("K-330").unit
+
+
+UNITS: Mapping[str, Callable[[], Unit]] = {"K-110": _k110, "K-220": _k220, "K-330": _k330}
 
 
 def make(

@@ -44,15 +44,17 @@ def test_the_machine_loads_none_of_the_expected_value_code() -> None:
 
 @pytest.mark.slow
 def test_machine_code_goes_to_the_folder_named_and_is_used_again(tmp_path: Path) -> None:
-    for name in ("simulator", "model"):
+    for name in ("simulator", "model", "agent"):
         source = PACKAGE.parent / name
         shutil.copytree(source, tmp_path / "site" / name, ignore=shutil.ignore_patterns("__pycache__"))
     site, cache = tmp_path / "site", tmp_path / "cache"
     before = sorted(site.rglob("*"))
     code = (
         "import time\nt = time.process_time()\n"
-        "from simulator.machine import Machine\nfrom simulator.ostmere import EQUIPMENT, K330, USUAL\n"
-        "Machine(K330, EQUIPMENT['K-330'], USUAL['K-330'], 1).run(1)\nprint(time.process_time() - t)\n"
+        "from simulator.machine import Machine\nfrom simulator.ostmere import EQUIPMENT, USUAL\n"
+        "from agent.siteplan.load import load_site\nfrom pathlib import Path\n"
+        "unit = load_site(Path('site/simulator/sites/ostmere.yaml')).unit('K-330').unit\n"
+        "Machine(unit, EQUIPMENT['K-330'], USUAL['K-330'], 1).run(1)\nprint(time.process_time() - t)\n"
     )
     first = float(python(code, site, NUMBA_CACHE_DIR=str(cache)))
     second = float(python(code, site, NUMBA_CACHE_DIR=str(cache)))
