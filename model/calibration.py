@@ -184,8 +184,8 @@ def fit_calibration(
     -----
     Maximum of the posterior density by Gauss-Newton with Levenberg's damping; covariance by Laplace's
     approximation. Taught by discharge temperatures, by flow and electrical power where there are such tags
-    (power through one factor a unit), and by the balance between stages. What a transmitter reads wrong it
-    reads wrong in every frame, so all frames of a load step weigh as one observation.
+    (power through one factor a unit), and by the balance between stages. Frames under one condition
+    weigh as one reading (`model.teaching.teach`).
 
     References
     ----------
@@ -232,7 +232,7 @@ def fit_calibration(
             float(np.exp(theta[-1]) * np.sqrt(covariance[-1, -1])) if has_power else None
         ),
         misfit=misfit,
-        readings=sum(t.channels for t in teachings.values()),
+        readings=sum(t.readings for t in teachings.values()),
         first=min(times), last=max(times), who=who, when=when, why=why,
     )  # fmt: skip
 
@@ -329,7 +329,7 @@ def _refuse_misfit(
         evaluation = evaluate(unit, gas, corrections_from(theta[_block(place)]), teaching.measured)
         differences = teaching.differences(evaluation, factor)
         misfit += float((teaching.whitened(differences) ** 2).sum())
-        readings += teaching.channels
+        readings += teaching.readings
         name, sigmas = teaching.farthest(differences)
         if sigmas > farthest:
             worst, farthest = name, sigmas

@@ -1,7 +1,7 @@
 """What steady frames of a healthy machine say about its corrections, and how much each reading weighs."""
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Final
 
 import numpy as np
@@ -19,6 +19,7 @@ Array = NDArray[np.float64]
 
 MOST_FRAMES: Final = 120
 """Frames of a load step that are used, evenly spread over those given: more teach nothing new."""
+_CONDITION: Final = 0.15  # change of a ratio or the speed, natural logarithm, that makes another condition
 _MOSTLY: Final = 0.9  # a reading that fewer frames have is left out
 
 
@@ -47,7 +48,8 @@ class Teaching:
     balances: tuple[tuple[str, str], ...]  # neighbours that pass the same molar flow
     has_flow: bool
     has_power: bool
-    root: Array  # (channels, channels) lower triangular root of the covariance of the readings
+    condition: NDArray[np.intp]  # (frames,) which condition each frame belongs to
+    root: Array  # lower triangular root of the covariance of all readings, conditions by channels
 
     @property
     def frames(self) -> int:
@@ -56,6 +58,10 @@ class Teaching:
     @property
     def channels(self) -> int:
         return len(self.stages) + len(self.balances) + self.has_flow + self.has_power
+
+    @property
+    def readings(self) -> int:
+        return int(self.root.shape[0])
 
     def differences(self, evaluation: Evaluation, log_power_factor: float) -> Array:
         """Measured less expected, (channels, frames): kelvins, then shares."""
@@ -66,14 +72,17 @@ class Teaching:
         names = [f"discharge temperature of {stage}" for stage in self.stages]
         names += [f"balance of {a} and {b}" for a, b in self.balances]
         names += ["flow"] * self.has_flow + ["electrical power"] * self.has_power
-        standard = np.sqrt((self.root**2).sum(axis=1))
-        off = np.abs(differences.mean(axis=1)) / standard
+        off = np.abs(self._means(differences)) / np.sqrt((self.root**2).sum(axis=1))
         worst = int(np.argmax(off))
-        return names[worst], float(off[worst])
+        return names[worst % self.channels], float(off[worst])
 
     def whitened(self, differences: Array) -> Array:
-        """The same in standard uncertainties, all frames weighing as one."""
-        return np.asarray(np.linalg.solve(self.root, differences) / math.sqrt(self.frames))
+        """The same as independent numbers in standard uncertainties: frames of a condition weigh as one."""
+        return np.asarray(np.linalg.solve(self.root, self._means(differences)))
+
+    def _means(self, differences: Array) -> Array:
+        rows = [differences[:, self.condition == k].mean(axis=1) for k in range(self.condition.max() + 1)]
+        return np.concatenate(rows)
 
 
 def teach(
@@ -102,7 +111,9 @@ def teach(
     Notes
     -----
     A reading is compared with what the model expects from other readings: the covariance of these
-    differences holds every transmitter on both sides, and the model's own error, stage by stage.
+    differences holds every transmitter on both sides, and the model's own error, stage by stage. What a
+    transmitter reads wrong it reads wrong in every frame; the model errs anew only where a stage ratio or the
+    speed is another by 15 %. So frames under one condition weigh as one reading, however many they are.
 
     References
     ----------
@@ -127,7 +138,7 @@ def _teach_step(
         measured=measured,
         stages=tuple(s.subject for s in unit.stages),
         balances=tuple((a.subject, b.subject) for a, b in zip(unit.stages, unit.stages[1:], strict=False)),
-        has_flow=True, has_power=True, root=np.eye(1),
+        has_flow=True, has_power=True, condition=np.zeros(measured.frames, np.intp), root=np.eye(1),
     )  # fmt: skip
     table = _differences(every, evaluation, measured, POWER_FACTOR.log_mean)
     there = np.isfinite(table).mean(axis=1) >= _MOSTLY
@@ -144,13 +155,23 @@ def _teach_step(
         balances=tuple(
             b for b, yes in zip(every.balances, there[stages : stages + balances], strict=True) if yes
         ),
-        has_flow=bool(there[-2]), has_power=bool(there[-1]), root=np.eye(1),
+        has_flow=bool(there[-2]), has_power=bool(there[-1]),
+        condition=_conditions(unit, measured.like(measured.values[kept])), root=np.eye(1),
     )  # fmt: skip
     covariance = _covariance(unit, gas, corrections, shape, accuracy)
-    return Teaching(
-        measured=shape.measured, stages=shape.stages, balances=shape.balances, has_flow=shape.has_flow,
-        has_power=shape.has_power, root=np.asarray(np.linalg.cholesky(covariance), np.float64),
-    )  # fmt: skip
+    return replace(shape, root=np.asarray(np.linalg.cholesky(covariance), np.float64))
+
+
+def _conditions(unit: Unit, measured: Measured) -> NDArray[np.intp]:
+    """Number frames by ratio of each stage and speed, counted from their means."""
+    rows = [measured.column("unit.speed")]
+    for stage in unit.stages:
+        ps, pd = (measured.column(f"{stage.subject}.{side}_pressure") for side in ("suction", "discharge"))
+        rows.append(pd / ps)
+    logs = np.log(np.where(np.isfinite(np.stack(rows)), np.stack(rows), 1.0))
+    places = np.floor((logs - logs.mean(axis=1, keepdims=True)) / _CONDITION + 0.5)
+    _, condition = np.unique(places, axis=1, return_inverse=True)
+    return np.asarray(condition.ravel(), np.intp)
 
 
 def _differences(
@@ -178,14 +199,29 @@ def _differences(
 def _covariance(
     unit: Unit, gas: GasSurface, corrections: Corrections, teaching: Teaching, accuracy: InputAccuracy
 ) -> Array:
-    """Of the differences of the middle frame: what each transmitter moves, and the model's error."""
-    middle = teaching.measured.like(np.median(teaching.measured.values, axis=0)[None, :])
-    sources = accuracy.sources(middle.names)
-    sheets = [source.moved(middle.values, sign) for source in sources for sign in (1.0, -1.0)]
-    stacked = middle.like(np.concatenate(sheets or [middle.values]))
+    """Of the mean differences: what each transmitter moves under all conditions, and the model under each."""
+    sources = accuracy.sources(teaching.measured.names)
+    places = range(teaching.condition.max() + 1)
+    middles = np.stack([np.median(teaching.measured.values[teaching.condition == k], axis=0) for k in places])
+    sheets = [source.moved(middles, sign) for source in sources for sign in (1.0, -1.0)]
+    stacked = teaching.measured.like(np.concatenate(sheets or [middles]))
     found = _differences(teaching, evaluate(unit, gas, corrections, stacked), stacked, POWER_FACTOR.log_mean)
-    parts = [(found[:, 2 * k] - found[:, 2 * k + 1]) / 2 for k in range(len(sources))]
+    found = found.reshape(teaching.channels, -1, len(places))
+    parts = [((found[:, 2 * k] - found[:, 2 * k + 1]) / 2).T.ravel() for k in range(len(sources))]
+    own = _model_parts(unit, teaching)
+    for k in places:
+        for row in own:
+            part = np.zeros((len(places), teaching.channels))
+            part[k] = row
+            parts.append(part.ravel())
+    table = np.stack(parts)
+    return np.asarray((table[:, :, None] * table[:, None, :]).sum(axis=0))
+
+
+def _model_parts(unit: Unit, teaching: Teaching) -> list[Array]:
+    """Independent errors of the model under one condition, each as it moves the channels."""
     capacity, power = MODEL_ERRORS["capacity"].relative, MODEL_ERRORS["power"].relative
+    parts = []
     for k in range(len(teaching.stages)):
         row = np.zeros(teaching.channels)
         row[k] = MODEL_ERRORS["discharge_temperature_residual"].absolute
@@ -202,5 +238,4 @@ def _covariance(
         row = np.zeros(teaching.channels)
         row[-1] = power
         parts.append(row)
-    table = np.stack(parts)
-    return np.asarray((table[:, :, None] * table[:, None, :]).sum(axis=0))
+    return parts
