@@ -9,6 +9,7 @@ Outside its domain a table refuses.
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
+from types import MappingProxyType
 from typing import Final
 
 import numpy as np
@@ -30,7 +31,7 @@ from simulator.tabulate_columns import (
     scale,
 )
 from simulator.tabulate_domain import Domain, OutsideTableError, Spot
-from simulator.tabulate_sheet import Sheet, fault_ladder, fit, healthy_ladder, pairs
+from simulator.tabulate_sheet import Bend, Sheet, fault_ladder, fit, healthy_ladder, pairs
 from simulator.tabulate_store import SheetStore
 
 # What a held-out run may differ by: flow and pressures, power (shares), discharge temperatures.
@@ -39,7 +40,9 @@ _ALLOWED_POWER: Final = 0.005
 _ALLOWED_K: Final = 0.4
 _ALLOWED_DEG: Final = 2.0  # of reversal
 TOO_COARSE: Final = 3.0  # times the allowed error: such a table is refused
-_BENDING: Final = frozenset({"suction_pressure_pa", "discharge_pressure_pa", "speed_rad_s"})
+_BENDS: Final = MappingProxyType(
+    {"speed_rad_s": Bend.ROUGH, "suction_pressure_pa": Bend.PLAIN, "discharge_pressure_pa": Bend.PLAIN}
+)
 _FIRST_TURNS: Final = 40
 _FAILED: Final = 0.1  # largest share of runs that may fail
 
@@ -210,7 +213,7 @@ class Tabulator:
         return sheet
 
     def _fit(self, table: Table, members: tuple[int, ...]) -> Sheet:
-        bends = [a.name in _BENDING for a in table.domain.axes]
+        bends = [_BENDS.get(a.name, Bend.SMOOTH) for a in table.domain.axes]
         axes = len(bends)
 
         def known(points: Floats) -> Floats:
@@ -259,15 +262,15 @@ class Tabulator:
 
         return run
 
-    def _judge(self, rows: Floats, miss: Floats) -> float:
-        """Worst miss of a run / what is allowed."""
+    def _judge(self, rows: Floats, miss: Floats) -> Floats:
+        """Worst miss of each run / what is allowed."""
         count = len(self._columns)
-        worst = float((np.abs(miss[:, :count]) / self._allowed(rows)).max())
+        worst = (np.abs(miss[:, :count]) / self._allowed(rows)).max(axis=1)
         for k in range(len(self._unit.cylinders)):
             own = slice(count + k * CARD_ANGLES, count + (k + 1) * CARD_ANGLES)
             apart = reversals(rows[:, own]) - reversals(rows[:, own] - miss[:, own])
-            worst = max(worst, float(np.abs(apart).max()) / _ALLOWED_DEG)
-        return worst
+            worst = np.maximum(worst, np.abs(apart) / _ALLOWED_DEG)
+        return np.asarray(worst)
 
     def _allowed(self, rows: Floats) -> Floats:
         """Allowed errors of the columns without loads; what no tag shows is not judged."""

@@ -16,6 +16,12 @@ from simulator.outcome import MachineOutcome
 CARD_ANGLES: Final = 200  # of the pin load, from which reversal is read
 
 
+_OF_CYLINDER: Final = (
+    "gas_load_tension_n", "gas_load_compression_n", "pin_load_tension_n", "pin_load_compression_n",
+    "wall_temperature_k", "packing_flow_mol_s",
+)  # fmt: skip
+
+
 class Form(StrEnum):
     PER_SWEPT = "per suction pressure and speed"  # flows and powers
     LOGARITHM = "logarithm"
@@ -48,11 +54,7 @@ def columns_of(unit: Unit) -> tuple[Column, ...]:
         ):
             found.append((f"stage{stage.number}.{name}", form))
     for cylinder in unit.cylinders:
-        for name in (
-            "gas_load_tension_n", "gas_load_compression_n", "pin_load_tension_n", "pin_load_compression_n",
-            "wall_temperature_k", "packing_flow_mol_s",
-        ):  # fmt: skip
-            found.append((f"cylinder{cylinder.number}.{name}", Form.PLAIN))
+        found += [(f"cylinder{cylinder.number}.{name}", Form.PLAIN) for name in _OF_CYLINDER]
     return tuple(Column(name=name, form=form) for name, form in found)
 
 

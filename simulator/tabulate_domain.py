@@ -1,4 +1,4 @@
-"""Over what a table holds: the boundary inputs that vary, each with its range, and the faults with their sizes."""
+"""Over what a table holds: boundary inputs that vary, each with its range, and faults with their sizes."""
 
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field, replace

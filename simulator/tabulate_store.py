@@ -1,7 +1,8 @@
 """Sheets kept on disk, under a digest of all that they depend on: the plant's sources and every input."""
 
 import hashlib
-from collections.abc import Mapping, Set
+from collections.abc import Mapping
+from collections.abc import Set as AbstractSet
 from dataclasses import fields, is_dataclass
 from pathlib import Path
 from typing import Final
@@ -13,7 +14,8 @@ from simulator.tabulate_sheet import Sheet
 _SOURCES: Final = (
     "compiled.py", "cylinder.py", "eos.py", "equipment.py", "faults.py", "gas_data.py", "kinematics.py",
     "layout.py", "machine.py", "network.py", "outcome.py", "polynomial.py", "reckoning.py", "settling.py",
-    "tabulate.py", "tabulate_columns.py", "tabulate_domain.py", "tabulate_sheet.py", "valves.py", "wet_gas.py",
+    "tabulate.py", "tabulate_columns.py", "tabulate_domain.py", "tabulate_sheet.py", "valves.py",
+    "wet_gas.py",
 )  # fmt: skip
 
 
@@ -33,7 +35,7 @@ def canonical(value: object) -> str:
         return f"{type(value).__name__}({inside})"
     if isinstance(value, Mapping):
         return "{" + ",".join(sorted(f"{canonical(k)}:{canonical(v)}" for k, v in value.items())) + "}"
-    if isinstance(value, Set):
+    if isinstance(value, AbstractSet):
         return "{" + ",".join(sorted(canonical(v) for v in value)) + "}"
     if isinstance(value, (list, tuple)):
         return "[" + ",".join(canonical(v) for v in value) + "]"
