@@ -364,6 +364,13 @@ class HeaderSwing:
         wave = sum(a * math.sin(2 * math.pi * plant_time_s / period + phase) for (a, period), phase in turns)
         return 1 + self._amplitude * wave
 
+    def factors(self, plant_time_s: NDArray[np.float64]) -> NDArray[np.float64]:
+        """`factor` for a row of instants."""
+        wave = np.zeros_like(plant_time_s)
+        for (share, period), phase in zip(self._PARTS, self._phases, strict=True):
+            wave += share * np.sin(2 * math.pi * plant_time_s / period + phase)
+        return 1 + self._amplitude * wave
+
 
 def rounded(value: float, unit: str) -> float:
     """A reading with the digits its sender has, in the plant's unit."""
