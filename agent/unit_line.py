@@ -9,8 +9,10 @@ from numpy.typing import NDArray
 from agent.manipulation.running import RunningState
 from agent.records import DerivedRow, Frame, Quality, RunState
 from agent.siteplan.plan import UnitPlan
-from model.evaluate import Corrections, Evaluation, InputAccuracy, Measured, evaluate
+from model.calibration import Calibration
+from model.evaluate import InputAccuracy, Measured
 from model.jacobian import JacobianKeeper
+from model.nuisances import calibrated, calibration_nuisances
 from model.quantities import series_name
 from model.surface import GasSurface
 
@@ -30,24 +32,31 @@ _MASK = {
 class UnitLine:
     """Evaluates frames of one unit; remembers its running state between live ticks."""
 
-    def __init__(self, plan: UnitPlan, gas: GasSurface, *, configuration: int) -> None:
+    def __init__(
+        self, plan: UnitPlan, gas: GasSurface, *, configuration: int, calibration: Calibration | None = None
+    ) -> None:
         self.plan = plan
         self._gas = gas
         self._configuration = configuration
-        self._corrections = Corrections.nominal()
         self._input_names = plan.input_names()
         self._result_names = plan.result_names()
         self._run_state_place = self._result_names.index(RUN_STATE)
-        accuracy = InputAccuracy.from_limits(
+        self._accuracy = InputAccuracy.from_limits(
             self._input_names,
             [i.accuracy for i in plan.inputs],
             [f"{i.source} {i.address}" for i in plan.inputs],
         )
-        # One keeper for live and late frames: its numbers follow from the frame alone.
-        self._keeper = JacobianKeeper(self._run, accuracy)
         self._required = np.array([i.required for i in plan.inputs])
         self._failing = False
+        self.use(calibration)
         self.reset()
+
+    def use(self, calibration: Calibration | None) -> None:
+        """Take up a calibration, or none; frames from now on are judged by it."""
+        unit, gas = self.plan.unit, self._gas
+        nuisances = () if calibration is None else calibration_nuisances(unit, gas, calibration)
+        # One keeper for live and late frames: its numbers follow from the frame alone.
+        self._keeper = JacobianKeeper(calibrated(unit, gas, calibration), self._accuracy, nuisances)
 
     def reset(self) -> None:
         self._running = RunningState(self.plan)
@@ -86,9 +95,6 @@ class UnitLine:
             return np.full(shape, np.nan), np.full(shape, Quality.OUT_OF_MODEL, dtype=np.uint8)
         self._failing = False
         return values, quality
-
-    def _run(self, measured: Measured) -> Evaluation:
-        return evaluate(self.plan.unit, self._gas, self._corrections, measured)
 
     def _row(
         self, frame: Frame, state: RunState, values: NDArray[np.float64], quality: NDArray[np.uint8]

@@ -10,6 +10,8 @@ import pytest
 from agent.records import DerivedRow, Frame, Quality
 from agent.siteplan.load import load_site
 from agent.unit_line import UnitLine
+from model.calibration import CORRECTIONS, Calibration
+from model.corrections import Corrections
 from model.gas import build_surface
 from model.quantities import PROBABILITY_SUFFIX, UNCERTAINTY_SUFFIX
 from model.surface import GasSurface
@@ -68,7 +70,7 @@ def same(first: Sequence[DerivedRow], second: Sequence[DerivedRow]) -> None:
         assert np.allclose(one.values, other.values, rtol=2e-7, atol=1e-12, equal_nan=True)
 
 
-@pytest.mark.parametrize(("count", "size"), [(60, 7), (60, 200)])
+@pytest.mark.parametrize(("count", "size"), [(40, 7), (40, 200)])
 def test_live_numbers_do_not_hang_on_the_batch(count: int, size: int) -> None:
     rows = frames(count)
     single, parts = line(), line()
@@ -79,10 +81,10 @@ def test_live_numbers_do_not_hang_on_the_batch(count: int, size: int) -> None:
 
 def test_late_frames_get_the_numbers_they_would_have_had_live() -> None:
     """Frames in the middle of a steady run, alone and out of order, from a line that has seen others."""
-    rows = frames(60)[40:48]
+    rows = frames(40)[20:26]
     straight, busy = line(), line()
-    live = straight.live(frames(60))[40:48]
-    busy.live(frames(60)[:20])
+    live = straight.live(frames(40))[20:26]
+    busy.live(frames(40)[:10])
     again = busy.again(rows[::-1])
     running = live[0].values.size
     place = straight.plan.result_names().index("unit.run_state")
@@ -95,7 +97,7 @@ def test_late_frames_get_the_numbers_they_would_have_had_live() -> None:
 def test_a_row_holds_the_uncertainty_of_estimates_and_the_probability_beside_margins() -> None:
     found = line()
     names = found.plan.result_names()
-    row = found.live(frames(20))[-1]
+    row = found.live(frames(12))[-1]
     values = dict(zip(names, row.values.tolist(), strict=True))
     assert values["cylinder1.reversal_degrees" + UNCERTAINTY_SUFFIX] > 0
     marks = dict(zip(names, row.quality.tolist(), strict=True))
@@ -105,3 +107,23 @@ def test_a_row_holds_the_uncertainty_of_estimates_and_the_probability_beside_mar
         if marks[name] == Quality.GOOD:
             assert 0 <= values[name + PROBABILITY_SUFFIX] <= 1
     assert any(marks[name] == Quality.GOOD for name in margins)
+
+
+def test_a_calibration_is_taken_up_from_the_next_frame_on() -> None:
+    variance = np.diag([0.01**2] * len(CORRECTIONS))
+    calibration = Calibration(
+        version=1, corrections={0: Corrections(volumetric_deficit=0.02)}, covariance={0: variance},
+        frames={0: 40}, power_factor=None, power_factor_standard=None, misfit=1.0, readings=3, first=0.0,
+        last=1.0, who="a", when=1.0, why="b",
+    )  # fmt: skip
+    one = line()
+    name = "stage1.volumetric_efficiency"
+    place, u = (one.plan.result_names().index(n) for n in (name, name + UNCERTAINTY_SUFFIX))
+    rows = frames(12)
+    plain = one.again(rows)[-1].values
+    one.use(calibration)
+    taught = one.again(rows)[-1].values
+    assert taught[place] == pytest.approx(plain[place] - 0.02, abs=1e-6)  # hand
+    assert taught[u] >= np.hypot(plain[u], 0.01) * 0.95
+    one.use(None)
+    assert one.again(rows)[-1].values[place] == plain[place]
