@@ -99,6 +99,12 @@ class Table:
         """Worst error of a held-out run / what is allowed, over all sheets."""
         return max(sheet.held_out for sheet in self.sheets.values())
 
+    @property
+    def value_names(self) -> tuple[str, ...]:
+        """Names that `values` gives."""
+        reversal = (f"cylinder{c.number}.reversal_rad" for c in self.unit.cylinders)
+        return (*(c.name for c in self.columns), "electrical_power_w", *reversal)
+
     def _full(self, name: str, boundary: Mapping[str, Floats], count: int) -> Floats:
         if any(axis.name == name for axis in self.domain.axes):
             return np.asarray(boundary[name], dtype=float)
