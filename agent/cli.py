@@ -119,6 +119,40 @@ def plant(
     raise typer.Exit(run(site, scenario=scenario, addresses=pairs, pace=pace, seed=seed, timetable=True))
 
 
+@app.command("plant history")
+def plant_history(  # noqa: PLR0917 - options
+    out: Annotated[Path, typer.Option(help="Folder of the files.", show_default=False)],
+    days: Annotated[float, typer.Option(help="How many days.", min=0.001)] = 400.0,
+    scenario: Annotated[
+        str | None, typer.Option(help="Name of a scenario, or a file; without it ordinary life.")
+    ] = None,
+    seed: Annotated[int, typer.Option(help="Seed of weather, wander and noise.")] = 1,
+    units: Annotated[
+        list[str] | None, typer.Option(help="A unit; repeatable. All of the site without it.")
+    ] = None,
+    start: Annotated[str, typer.Option(metavar="DATE", help="First day, UTC.")] = "2025-01-01",
+    site: Annotated[
+        Path | None, typer.Option(help="The site file; the invented site without it.", show_default=False)
+    ] = None,
+    cache: Annotated[Path, typer.Option(help="Folder where tables are kept.")] = Path("data/cache"),
+) -> None:
+    """Write months of minutes of the invented plant as Parquet and CSV, the sealed truth apart."""
+    from simulator.history_main import run  # noqa: PLC0415
+
+    raise typer.Exit(
+        run(
+            out,
+            site=site,
+            days=days,
+            scenario=scenario,
+            seed=seed,
+            units=units or (),
+            start=start,
+            cache=cache,
+        )
+    )
+
+
 @app.command()
 def demo(
     pace: Annotated[float, typer.Option(help="Hurry the story by this factor.", min=0.1, max=60)] = 1.0,
@@ -134,5 +168,6 @@ def demo(
 
 
 def main() -> None:
-    """Entry point of the command."""
-    app()
+    """Entry point of the command; ``plant history`` is a command beside ``plant SITE``."""
+    words = sys.argv[1:]
+    app(["plant history", *words[2:]] if words[:2] == ["plant", "history"] else words)
