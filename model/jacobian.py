@@ -148,16 +148,24 @@ class JacobianKeeper:
             if good[k].any() and not (c.even and np.isfinite(_everything(c)[:, good[k]]).all())
         ]
         if lost:
-            for k, cell in zip(lost, self._make(measured.like(measured.values[lost])), strict=True):
+            own = self._make(measured.like(measured.values[lost]), spread=[cells[k].drawn for k in lost])
+            for k, cell in zip(lost, own, strict=True):
                 cells[k] = cell
         return cells
 
-    def _make(self, points: Measured, even: _Evenness | None = None) -> list[_Cell]:
+    def _make(
+        self,
+        points: Measured,
+        even: _Evenness | None = None,
+        spread: Sequence[Mapping[str, Drawn]] | None = None,
+    ) -> list[_Cell]:
+        """Cells about points; draws, which cost most, are always those of the middle of a cell."""
         self.refreshed += points.frames
         evaluation, found = slopes(self._run, points, self._accuracy, self._nuisances)
         split = len(found.sources) - len(self._nuisances)
         squares = (found.change[:split] ** 2).sum(axis=0)
-        spread = [self._drawn(points, found, k) for k in range(points.frames)]
+        if spread is None:
+            spread = [self._drawn(points, found, k) for k in range(points.frames)]
         fixed = model_variance(found.results, evaluation.columns, points.frames)
         flat = np.ones(points.frames, np.bool_) if even is None else even(points, found, fixed, spread)
         cells = []

@@ -142,6 +142,19 @@ def test_one_reading_of_a_straight_line_has_a_closed_form() -> None:
         assert found.covariance_of(0)[k, k] == pytest.approx(left, rel=0.02)
 
 
+def test_another_condition_teaches_more_and_more_of_the_same_does_not() -> None:
+    """A hundred frames of one hour are one reading; a second pressure ratio is a second one."""
+    few, many = (healthy(frames(n), Corrections.nominal()) for n in (30, 90))
+    rows = frames(60)
+    rows[30:, place("stage1.suction_pressure")] *= 1.3
+    two = fit(healthy(rows, Corrections.nominal()))
+    one, same = fit(few), fit(many)
+    assert (one.readings, same.readings, two.readings) == (3, 3, 6)
+    trace = [float(np.log(np.linalg.det(c.covariance_of(0)))) for c in (one, same, two)]
+    assert trace[1] == pytest.approx(trace[0], abs=0.02)
+    assert trace[2] < trace[0] - 0.1
+
+
 def test_each_load_step_has_its_own_and_one_never_seen_borrows() -> None:
     unit = booster()
     rows = frames(120, steps=(0.0, 0.0, 1.0))

@@ -6,6 +6,7 @@ import numpy as np
 import pytest
 
 from model.evaluate import Corrections, Evaluation, InputAccuracy, Measured, evaluate
+from model.evaluation import Column
 from model.jacobian import JacobianKeeper, bending
 from model.monte_carlo import draw_frames, drawn, seed_of
 from model.uncertainty import MODEL_ERRORS, with_uncertainty
@@ -72,9 +73,15 @@ def test_inputs_of_one_transmitter_are_drawn_together() -> None:
 
 def test_a_spread_that_has_a_closed_form() -> None:
     """Ratio of two pressures: even draws, both small."""
-    found = drawn(run_booster, booster_frame(), ACCURACY, ("stage1.stage_ratio",), 4000)["stage1.stage_ratio"]
+
+    def ratio(measured: Measured) -> Evaluation:
+        values = measured.values[:, 1] / measured.values[:, 0]
+        column = Column(values=values, verdicts=np.zeros(values.size, np.uint8))
+        return Evaluation(frames=values.size, columns={"stage1.stage_ratio": column})
+
+    found = drawn(ratio, booster_frame(), ACCURACY, ("stage1.stage_ratio",), 4000)["stage1.stage_ratio"]
     ps, pd = BOOSTER_FRAME[0], BOOSTER_FRAME[1]
-    # hand: relative uncertainties in quadrature; 3 %, the statistical error of 4 000 draws being 1 %
+    # hand: relative uncertainties in quadrature; 3 %, the statistical error of 4 000 even draws being 1 %
     expected = pd / ps * math.hypot(15e3 / ps, 25e3 / pd) / math.sqrt(3)
     assert found.standard == pytest.approx(expected, rel=0.03)
     assert found.deviations.mean() == pytest.approx(0, abs=0.05 * expected)
@@ -159,3 +166,21 @@ def test_slopes_agree_with_4000_draws_while_loads_reverse_well(plant: str, step:
         print(f"{plant} step {step} {name}: slopes / draws {ratio:.3f}")
         # bar: 10 %, the statistical error of 4 000 draws being 1 %
         assert ratio == pytest.approx(1, abs=0.1), name
+
+
+@pytest.mark.slow
+def test_draws_kept_for_a_cell_serve_every_frame_of_it() -> None:
+    """Against draws of each frame's own, four times as many."""
+    rng = np.random.default_rng(4)
+    frames = np.tile(booster_frame(**FEEBLE).values, (8, 1))
+    frames[:, :2] *= 1 + 0.06 * rng.uniform(-1, 1, (8, 2))
+    frames[:, BOOSTER_INPUTS.index("unit.speed")] *= 1 + 0.5 * rng.uniform(0, 1, 8)
+    measured = Measured.from_inputs(booster(), BOOSTER_INPUTS, frames)
+    kept = JacobianKeeper(run_booster, ACCURACY).update(measured)
+    for key in ("reversal_degrees", "reversal_percent"):
+        name = f"cylinder1.{key}"
+        floor = MODEL_ERRORS[key].absolute
+        for k in range(8):
+            one = measured.like(measured.values[k : k + 1])
+            own = math.hypot(drawn(run_booster, one, ACCURACY, (name,), 4000)[name].standard, floor)
+            assert kept.column(f"{name}.u").values[k] == pytest.approx(own, rel=0.05)
