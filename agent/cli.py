@@ -155,6 +155,7 @@ def plant_history(  # noqa: PLR0917 - options
 
 @app.command()
 def demo(
+    story: Annotated[str, typer.Option(help="Name of a story; an unknown one lists them.")] = "first-light",
     pace: Annotated[float, typer.Option(help="Hurry the story by this factor.", min=0.1, max=60)] = 1.0,
     port: Annotated[int, typer.Option(help="Port of the pages; a free one is taken if it is in use.")] = 8050,
     keep: Annotated[
@@ -164,7 +165,7 @@ def demo(
     """Start an invented plant, the agent and the pages on this machine, loopback only."""
     from simulator.demo import run  # noqa: PLC0415
 
-    raise typer.Exit(run(pace=pace, port=port, keep=keep))
+    raise typer.Exit(run(story=story, pace=pace, port=port, keep=keep))
 
 
 def main() -> None:

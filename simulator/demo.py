@@ -30,6 +30,7 @@ from simulator.children import Child, Children, Death
 
 MQTT_PORT, OPCUA_PORT, PAGE_PORT = 1883, 4840, 8050  # the usual ones
 LIVE_WITHIN_S = 180.0
+STORY = "first-light"
 ENVIRONMENT = {"OPENBLAS_NUM_THREADS": "1", "PYTHONUNBUFFERED": "1"}
 MARK = (
     "Ostmere Works is an INVENTED plant: its machines, people and numbers are made up.\n"
@@ -67,9 +68,16 @@ class Program:
     words: tuple[str, ...]
 
 
-def programs(ports: Ports, site: Path, data: Path, pace: float) -> tuple[Program, ...]:
+def stories() -> tuple[str, ...]:
+    """Names of the stories that the plant can tell."""
+    found = (Path(str(entry)) for entry in (files("simulator") / "scenarios").iterdir())
+    return tuple(sorted(path.stem for path in found if path.suffix == ".yaml"))
+
+
+def programs(ports: Ports, site: Path, data: Path, pace: float, story: str = STORY) -> tuple[Program, ...]:
     """What the demo starts, in this order."""
-    plant = ("--site", str(site), "--pace", f"{pace:g}", "--timetable", *ports.addresses)
+    told = ("--scenario", story, "--pace", f"{pace:g}", "--timetable")
+    plant = ("--site", str(site), *told, *ports.addresses)
     store = (str(site), "--data", str(data))
     return (
         Program(name="broker", words=("simulator.broker_main", "--port", str(ports.mqtt))),
@@ -108,11 +116,13 @@ def _hold_free(held: ExitStack) -> int:
     return int(probe.getsockname()[1])
 
 
-def run(*, pace: float = 1.0, port: int = PAGE_PORT, keep: Path | None = None) -> int:
+def run(*, story: str = STORY, pace: float = 1.0, port: int = PAGE_PORT, keep: Path | None = None) -> int:
     """Run the demo until Ctrl-C or SIGTERM.
 
     Parameters
     ----------
+    story : str
+        Name of one of `stories`.
     pace : float
         How many times faster the story runs [1].
     port : int
@@ -128,6 +138,10 @@ def run(*, pace: float = 1.0, port: int = PAGE_PORT, keep: Path | None = None) -
     if find_spec("amqtt") is None:
         print(f"throwline demo: {MISSING}", file=sys.stderr)  # noqa: T201
         return 1
+    if story not in stories():
+        known = ", ".join(stories())
+        print(f"throwline demo: there is no story {story!r}; there are: {known}", file=sys.stderr)  # noqa: T201
+        return 1
     ports = choose_ports(port)
     site = Path(str(files("simulator") / "sites" / "ostmere.yaml"))
     with _asked_to_end() as stop, _data_folder(keep) as data:
@@ -135,7 +149,7 @@ def run(*, pace: float = 1.0, port: int = PAGE_PORT, keep: Path | None = None) -
         _say(f"Data: {data}" + ("" if keep else "  (removed at the end)"))
         if ports.page != port:
             _say(f"Port {port} is in use; the pages get port {ports.page}.")
-        return _watch(programs(ports, site, data, pace), ports, stop)
+        return _watch(programs(ports, site, data, pace, story), ports, stop)
 
 
 def _watch(wanted: tuple[Program, ...], ports: Ports, stop: threading.Event) -> int:

@@ -62,6 +62,18 @@ def test_programs_meet_on_the_chosen_ports_and_nowhere_but_loopback(tmp_path: Pa
         assert "control-system=opc.tcp://127.0.0.1:22/ostmere" in wanted[name]
 
 
+def test_plant_tells_the_story_asked_for(tmp_path: Path) -> None:
+    plant = {p.name: p.words for p in programs(PORTS, Path("site.yaml"), tmp_path, 2.0, "quiet")}["plant"]
+    assert plant[plant.index("--scenario") + 1] == "quiet"
+
+
+def test_unknown_story_is_one_sentence_that_names_the_known(capsys: pytest.CaptureFixture[str]) -> None:
+    assert run(story="once upon a time") == 1
+    said = capsys.readouterr().err
+    assert len(said.splitlines()) == 1
+    assert all(name in said for name in ("first-light", "hidden-leak", "clean-month"))
+
+
 def test_missing_extra_is_one_sentence(
     monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str]
 ) -> None:
@@ -129,7 +141,8 @@ def test_live_page_is_told_with_address_timetable_and_mark_and_ctrl_c_ends_all(
 ) -> None:
     folders: list[Path] = []
 
-    def wanted(ports: Ports, site: Path, data: Path, pace: float) -> tuple[Program, ...]:
+    def wanted(ports: Ports, site: Path, data: Path, pace: float, story: str) -> tuple[Program, ...]:
+        assert story == "first-light"
         assert site.name == "ostmere.yaml"
         assert data.is_dir()
         folders.append(data)
