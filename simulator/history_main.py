@@ -1,4 +1,4 @@
-"""``throwline plant history``: names the cache folders before the compiler is loaded, then makes a history."""
+"""``throwline plant history``: names the cache folders before the compiler is loaded, then makes it."""
 
 import sys
 from collections.abc import Sequence

@@ -75,10 +75,14 @@ def reading(machine: Machine, outcome: MachineOutcome) -> Floats:
             cylinder.pin_load_tension_n, cylinder.pin_load_compression_n,
             float(np.mean([e.wall_temperature_k for e in cylinder.ends])), cylinder.packing_flow_mol_s,
         ]  # fmt: skip
-    cards = [
-        card.pin_load_n[:: len(card.pin_load_n) // CARD_ANGLES][:CARD_ANGLES] for card in machine.cards()
-    ]
+    cards = [_spaced(card.pin_load_n) for card in machine.cards()]
     return np.concatenate([row, *cards])
+
+
+def _spaced(load: Floats) -> Floats:
+    """A load over the angle at `CARD_ANGLES` equal angles."""
+    at = np.arange(CARD_ANGLES) * (len(load) / CARD_ANGLES)
+    return np.asarray(np.interp(at, np.arange(len(load) + 1), np.append(load, load[0])))
 
 
 def scale(columns: Sequence[Column], boundary: Mapping[str, Floats]) -> Floats:
