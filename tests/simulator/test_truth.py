@@ -29,6 +29,12 @@ def test_every_story_has_its_truth_and_every_truth_its_story() -> None:
     assert len(STORIES) == 14
 
 
+def test_readme_lists_every_story() -> None:
+    rows = [x for x in (ROOT / "README.md").read_text(encoding="utf-8").splitlines() if x.startswith("| `")]
+    listed = {name for row in rows for name in row.split("|")[1].replace("`", "").replace(" ", "").split(",")}
+    assert listed == set(STORIES)
+
+
 @pytest.mark.parametrize("story", STORIES)
 def test_story_fits_the_site_and_says_what_it_is(story: str, site: SitePlan) -> None:
     told = load_scenario(SCENARIOS / f"{story}.yaml", site)

@@ -129,6 +129,14 @@ def test_what_needs_drift_detection_is_not_yet_in_reach() -> None:
     assert not found.failed
 
 
+@pytest.mark.parametrize(
+    "story", ["hidden-leak", "night-break", "heavier-gas", "creeping-gauge", "half-repair", "passing-recycle"]
+)
+def test_silence_is_blamed_only_on_who_claims_drift_detection(story: str) -> None:
+    assert score(truth_of(story), [], told()).words == "not yet in reach"
+    assert score(truth_of(story), [], told(), in_reach={Need.DRIFT}).words == "FAILED"
+
+
 def test_who_claims_drift_detection_is_held_to_it() -> None:
     truth = truth_of("hidden-leak")
     claims = {Need.DRIFT}
