@@ -1,5 +1,6 @@
 """Sealed truths: one for every story, true to its scenario, refused where malformed."""
 
+import re
 from collections.abc import Iterator
 from pathlib import Path
 
@@ -97,6 +98,16 @@ def test_truth_is_due_before_its_story_ends(story: str, site: SitePlan) -> None:
     for expected in truth_of(story).expected_first:
         assert ends is not None
         assert expected.at + expected.latest <= ends
+
+
+def test_no_other_source_names_the_folder() -> None:
+    mentions = [
+        path.relative_to(ROOT).as_posix()
+        for room in ("agent", "model", "dashboard", "simulator")
+        for path in sorted((ROOT / room).rglob("*.py"))
+        if re.search(r"""["'/]truths""", path.read_text(encoding="utf-8"))
+    ]
+    assert mentions == ["simulator/truth.py"]
 
 
 GOOD = """\
