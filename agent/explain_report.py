@@ -73,6 +73,11 @@ def _parts(found: Explanation) -> Iterator[RenderableType]:
         shown = f"{step.expression}\n= {value_text(step.value, step.unit)}"
         steps.add_row(step.symbol, step.words, shown, step.source)
     yield Padding(steps, (1, 0, 0, 0))
+    if found.shares:
+        shares = _table("Standard uncertainty, by share", "from", "share", "alone, SI")
+        for share in found.shares:
+            shares.add_row(found.source(share), f"{100 * share.share:.1f} %", f"{share.standard:.3g}")
+        yield Padding(shares, (1, 0, 0, 0))
     if found.working.functions:
         functions = _table("Functions", "name", "what it is")
         for name, words in found.working.functions.items():

@@ -13,8 +13,11 @@ from agent.records import DerivedRow, Frame, Quality
 from agent.siteplan.plan import SitePlan, UnitPlan
 from agent.storage.sqlite_series import SeriesReader
 from agent.stored_site import StoredSites
+from agent.unit_line import accuracy_of
+from model.budget import Share, budget
 from model.corrections import Corrections
 from model.errors import NotEvaluatedError
+from model.evaluate import Evaluation, evaluate
 from model.explain import working
 from model.gas import load_or_build
 from model.measured import Measured
@@ -40,11 +43,11 @@ class Explanation:
     name: str
     working: Working
     published: float  # as stored, SI
+    shares: tuple[Share, ...]  # of its uncertainty; none where it has none
 
     @property
     def words(self) -> str:
-        subject, quantity, _ = split_series(self.name)
-        return quantity.words if subject == "unit" else f"{quantity.words}, {_spaced(subject)}"
+        return _words(self.name)
 
     @property
     def shown(self) -> str:
@@ -55,6 +58,13 @@ class Explanation:
             barometer_pa=self.site.barometer_pa,
         )  # fmt: skip
         return f"{text} {unit_label(quantity.display_unit)}".rstrip()
+
+    def source(self, share: Share) -> str:
+        """Where a part of the uncertainty comes from; an input names its tag."""
+        names = share.source.split(" + ")
+        tags = [self.plan.input(name) for name in names]
+        found = [f"{i.tag}, {_words(i.name)}" for i in tags if i is not None]
+        return " and ".join(found) or f"{share.source}: {share.reason}".rstrip(": ")
 
     def origin(self, line: Given) -> str:
         """Where a given comes from; a measured one names its tag."""
@@ -104,8 +114,20 @@ class Explainer:
         except KeyError:
             raise ExplanationError(f"{unit_id} {name} is a state and has no formula.") from None
         return Explanation(
-            site=site, plan=plan, tick=frame.tick, name=name, working=found, published=float(code[0])
-        )
+            site=site, plan=plan, tick=frame.tick, name=name, working=found, published=float(code[0]),
+            shares=self._shares(plan, measured, name),
+        )  # fmt: skip
+
+    def _shares(self, plan: UnitPlan, measured: Measured, name: str) -> tuple[Share, ...]:
+        gas = self._gas(plan)
+
+        def run(frames: Measured) -> Evaluation:
+            return evaluate(plan.unit, gas, Corrections.nominal(), frames)
+
+        try:
+            return budget(run, measured, accuracy_of(plan), name)
+        except KeyError:
+            return ()
 
     def _stored(self, unit_id: str, at: int | None) -> tuple[Frame, DerivedRow, tuple[str, ...]]:
         columns = self._reader.columns(unit_id)
@@ -151,6 +173,7 @@ def _codes(frame: Frame, row: DerivedRow) -> list[tuple[float, int]]:
     return list(zip(values, (*frame.quality.tolist(), *row.quality.tolist()), strict=True))
 
 
-def _spaced(subject: str) -> str:
+def _words(name: str) -> str:
+    subject, quantity, _ = split_series(name)
     head = subject.rstrip("0123456789")
-    return f"{head} {subject[len(head) :]}"
+    return quantity.words if subject == "unit" else f"{quantity.words}, {head} {subject[len(head) :]}"

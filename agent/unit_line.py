@@ -29,6 +29,15 @@ _MASK = {
 }
 
 
+def accuracy_of(plan: UnitPlan) -> InputAccuracy:
+    """What the inputs of a unit are worth; one address read twice is one error."""
+    return InputAccuracy.from_limits(
+        plan.input_names(),
+        [i.accuracy for i in plan.inputs],
+        [f"{i.source} {i.address}" for i in plan.inputs],
+    )
+
+
 class UnitLine:
     """Evaluates frames of one unit; remembers its running state between live ticks."""
 
@@ -41,11 +50,7 @@ class UnitLine:
         self._input_names = plan.input_names()
         self._result_names = plan.result_names()
         self._run_state_place = self._result_names.index(RUN_STATE)
-        self._accuracy = InputAccuracy.from_limits(
-            self._input_names,
-            [i.accuracy for i in plan.inputs],
-            [f"{i.source} {i.address}" for i in plan.inputs],
-        )
+        self._accuracy = accuracy_of(plan)
         self._required = np.array([i.required for i in plan.inputs])
         self._failing = False
         self.use(calibration)

@@ -47,6 +47,7 @@ def layout(site: SitePlan, unit_id: str, name: str, explainer: Explainer, *, now
             ),
             _card("Given", ("Symbol", "What", "Value", "From"), _givens(found)),
             _card("Steps", ("Symbol", "What", "Formula", "Value", "Source"), _steps(found)),
+            _card("Standard uncertainty, by share", ("From", "Share", "Alone, SI"), _shares(found)),
             _card("Functions", ("Name", "What it is"), found.working.functions.items()),
             _back(unit_id),
         ],
@@ -61,6 +62,11 @@ def _givens(found: Explanation) -> Iterator[tuple[str, ...]]:
 def _steps(found: Explanation) -> Iterator[tuple[str, ...]]:
     for step in found.working.steps:
         yield step.symbol, step.words, step.expression, value_text(step.value, step.unit), step.source
+
+
+def _shares(found: Explanation) -> Iterator[tuple[str, ...]]:
+    for share in found.shares:
+        yield found.source(share), f"{100 * share.share:.1f} %", f"{share.standard:.3g}"
 
 
 def _card(title: str, heads: tuple[str, ...], rows: Iterable[tuple[str, ...]]) -> Component:
@@ -83,7 +89,7 @@ def _card(title: str, heads: tuple[str, ...], rows: Iterable[tuple[str, ...]]) -
 
 def _cell(head: str, text: str) -> Component:
     inside = html.Code(text) if head in {"Symbol", "Formula", "Name"} else text
-    return html.Td(inside, className="numeric" if head == "Value" else "")
+    return html.Td(inside, className="numeric" if head in {"Value", "Share", "Alone, SI"} else "")
 
 
 def _back(unit_id: str) -> Component:

@@ -47,10 +47,27 @@ def test_the_working_ends_at_the_stored_number(store: WrittenStore) -> None:
             assert found.published == pytest.approx(float(value))
 
 
+def test_shares_of_the_uncertainty_sum_to_one_and_name_their_tags(store: WrittenStore) -> None:
+    store.ticks(NOON, 1)
+    found = explainer(store).explain("K-110", "stage1.expected_discharge_temperature")
+    assert sum(share.share for share in found.shares) == pytest.approx(1.0)
+    sources = [found.source(share) for share in found.shares]
+    assert any(source.startswith("TT-1101, suction temperature") for source in sources)
+    assert any(source.startswith("model: ") for source in sources)
+    assert explainer(store).explain("K-110", "unit.speed").shares == ()
+
+
 def test_page_shows_tag_formula_source_and_time(store: WrittenStore) -> None:
     store.ticks(NOON, 1)
     text = text_of(store, "K-220", "stage2.expected_discharge_temperature")
-    for part in ("PT-2203", "T_of_h(h_s + W*(1 - q_w)/F, p_d)", "R. Joel", "by estimate", "nameplate"):
+    for part in (
+        "PT-2203",
+        "T_of_h(h_s + W*(1 - q_w)/F, p_d)",
+        "R. Joel",
+        "by estimate",
+        "nameplate",
+        "by share",
+    ):
         assert part in text
 
 
