@@ -6,6 +6,7 @@ cool, the gas that follows them a little, and a machine that stands still. Wells
 
 import math
 from collections.abc import Mapping
+from types import MappingProxyType
 from typing import Final
 
 import numpy as np
@@ -23,8 +24,12 @@ from simulator.standstill import COOL_WALL_S, Standstill
 
 MINUTE_S: Final = 60.0
 _TAP_BEFORE: Final = "suction header"
-# Share of a shift of the cylinder walls by which discharge gas is shifted (measured with the machine).
-WALL_SHARE: Final = 0.05
+# Share of a shift of the cylinder walls that discharge gas follows, all ends at work and some held open:
+# measured by shifting the walls of the settled machine by 30 K.
+WALL_SHARE: Final = MappingProxyType(
+    {"K-110": (0.054, 0.096), "K-220": (0.103, 0.168), "K-330": (0.046, 0.070)}
+)
+_WALL_SHARE_ELSE: Final = (0.06, 0.10)
 
 
 class TrueValues:
@@ -102,6 +107,9 @@ class TrueValues:
         running, ambient = minutes.running, minutes.ambient_k
         warmed, cooled = (-math.expm1(-MINUTE_S / s) for s in (WALL_LAG_S, COOL_WALL_S))
         gain = np.where(running, warmed, cooled)
+        at_work, held_open = WALL_SHARE.get(self._plan.unit.id, _WALL_SHARE_ELSE)
+        idle = np.array([bool(step.held_open) for step in self._plan.unit.load_steps])
+        share = np.where(idle[minutes.step], held_open, at_work)
         for stage in self._plan.unit.stages:
             behind = []
             for cylinder in stage.cylinders:
@@ -111,7 +119,7 @@ class TrueValues:
                 self._walls[cylinder.number] = float(wall[-1])
                 behind.append(wall - aim)
                 hidden[name] = wall
-            tags[f"stage{stage.number}.discharge_temperature"] += WALL_SHARE * np.mean(behind, axis=0)
+            tags[f"stage{stage.number}.discharge_temperature"] += share * np.mean(behind, axis=0)
 
     def _stand(self, minutes: Minutes, tags: dict[str, Floats]) -> None:
         running = minutes.running
