@@ -147,7 +147,7 @@ def rounded_row(values: Floats, unit: str) -> Floats:
     step = RESOLUTION.get(unit)
     if step is None:
         return values
-    return np.asarray(np.round(np.round(values / step) * step, digits(step)))
+    return np.asarray(np.round(np.round(values / step) * step, digits(step)) + 0.0)  # no minus zero
 
 
 def write_about(folder: Path, about: Mapping[str, object], truth: Mapping[str, object]) -> None:
