@@ -50,16 +50,22 @@ def test_machine_code_goes_to_the_folder_named_and_is_used_again(tmp_path: Path)
     site, cache = tmp_path / "site", tmp_path / "cache"
     before = sorted(site.rglob("*"))
     code = (
-        "import time\nt = time.process_time()\n"
+        "import time\nbegan = time.process_time()\n"
         "from simulator.machine import Machine\nfrom simulator.ostmere import EQUIPMENT, USUAL\n"
         "from agent.siteplan.load import load_site\nfrom pathlib import Path\n"
         "unit = load_site(Path('site/simulator/sites/ostmere.yaml')).unit('K-330').unit\n"
-        "Machine(unit, EQUIPMENT['K-330'], USUAL['K-330'], 1).run(1)\nprint(time.process_time() - t)\n"
+        "loaded = time.process_time()\n"
+        "Machine(unit, EQUIPMENT['K-330'], USUAL['K-330'], 1).run(1)\n"
+        "print(loaded - began, time.process_time() - loaded)\n"
     )
-    first = float(python(code, site, NUMBA_CACHE_DIR=str(cache)))
-    second = float(python(code, site, NUMBA_CACHE_DIR=str(cache)))
+    _, first = map(float, python(code, site, NUMBA_CACHE_DIR=str(cache)).split())
+    imports, second = map(float, python(code, site, NUMBA_CACHE_DIR=str(cache)).split())
     assert sorted(site.rglob("*")) == before  # nothing written beside the sources
     assert list(cache.rglob("*.nbc"))
     assert second < 0.5 * first
+    print(
+        f"processor time: imports {imports:.1f} s, first turn compiled {first:.1f} s, cached {second:.2f} s"
+    )
+    assert second <= 2.0  # S2
     python(code, site, NUMBA_CACHE_DIR="")  # no folder: compiles in memory
     assert sorted(site.rglob("*")) == before

@@ -33,16 +33,7 @@ FLUIDS = {
 }
 
 
-USED = {
-    "hydrogen",
-    "methane",
-    "ethane",
-    "propane",
-    "n-butane",
-    "nitrogen",
-    "carbon dioxide",
-    "water",
-}  # on the site
+UNUSED = {"ethylene", "isobutane"}  # no gas of the site holds them
 
 
 def reference(composition: Mapping[str, float]) -> Any:
@@ -57,14 +48,16 @@ def at(state: Any, temperature: float, pressure: float) -> tuple[float, float]:
     return state.compressibility_factor(), state.hmolar()
 
 
-@pytest.mark.parametrize(("gas", "bar"), [("natural_gas", 0.015), ("hydrogen_rich", 0.006)])
+@pytest.mark.parametrize(
+    ("gas", "bar", "highest"), [("natural_gas", 0.015, 80e5), ("hydrogen_rich", 0.006, 150e5)]
+)
 def test_compressibility_agrees_with_the_multiparameter_equation(
-    gas: str, bar: float, request: pytest.FixtureRequest
+    gas: str, bar: float, highest: float, request: pytest.FixtureRequest
 ) -> None:
     composition = request.getfixturevalue(gas)
     state, row = reference(composition), gas_row(mixture(composition))
     for temperature in (300.0, 340.0, 400.0, 440.0):
-        for pressure in (2e5, 20e5, 45e5, 75e5):  # what the units see
+        for pressure in (2e5, 20e5, 45e5, 75e5, highest):  # what the units see
             z = pressure * gas_volume(temperature, pressure, row) / (GAS_CONSTANT * temperature)
             # source: CoolProp 8, multi-parameter equation of state
             assert z == pytest.approx(at(state, temperature, pressure)[0], rel=bar), (temperature, pressure)
@@ -101,7 +94,7 @@ def test_ideal_heat_capacity_of_every_gas_agrees_with_its_reference_equation(nam
     for temperature in (300.0, 350.0, 400.0, 480.0):
         state.update(CoolProp.DmolarT_INPUTS, 1e-3, temperature)
         # source: CoolProp 8, ideal-gas part
-        bar = 0.005 if name in USED else 0.011
+        bar = 0.007 if name in UNUSED else 0.005
         assert gas.ideal_heat_capacity(temperature) == pytest.approx(state.cp0molar(), rel=bar)
 
 

@@ -54,8 +54,40 @@ def test_balances_close(settled: Callable[..., MachineOutcome], name: str, wet: 
     assert abs(got.closure.amount) < 1e-5
     assert abs(got.closure.energy) < 2e-3
     assert got.closure.clipped == 0.0
-    # light gas at low speed flutters its plates near the dead centres, where a step is held back more often
-    assert got.closure.held_back <= (0.02 if name == "K-220" else 1e-3)
+    print(f"{name}: amount {got.closure.amount:.0e}, energy {got.closure.energy:.0e}")
+
+
+@pytest.mark.parametrize("name", ["K-110", "K-220", "K-330"])
+def test_the_machines_that_were_built_need_no_help_in_a_thousand_steps(
+    machine_of: Callable[..., Machine], name: str
+) -> None:
+    closure = machine_of(name, draw=SEED).settle().closure
+    print(f"{name}: held back {closure.held_back:.1e}, bounded {closure.clipped:.1e} of all steps")
+    assert closure.held_back <= 1e-3
+    assert closure.clipped <= 1e-3
+
+
+@pytest.mark.parametrize(
+    "name",
+    [
+        "K-110",
+        pytest.param(
+            "K-220",
+            marks=pytest.mark.xfail(
+                reason="light gas at low speed, nameplate valves: plates flutter near the dead centres and "
+                "about 1 step in 80 is held back; flow and power stay within 0.1 % of those at 7200 steps"
+            ),
+        ),
+        "K-330",
+    ],
+)
+def test_machines_as_on_their_nameplate_need_no_help_in_a_thousand_steps(
+    settled: Callable[..., MachineOutcome], name: str
+) -> None:
+    closure = settled(name).closure
+    print(f"{name}: held back {closure.held_back:.1e}, bounded {closure.clipped:.1e} of all steps")
+    assert closure.clipped <= 1e-3
+    assert closure.held_back <= 1e-3
 
 
 @pytest.mark.parametrize("name", ["K-110", "K-220", "K-330"])
@@ -65,17 +97,18 @@ def test_dry_gas_is_kept_from_header_to_header(settled: Callable[..., MachineOut
 
 
 @pytest.mark.parametrize("name", ["K-110", "K-220", "K-330"])
-def test_walls_lie_between_suction_and_discharge(settled: Callable[..., MachineOutcome], name: str) -> None:
+def test_walls_lie_between_suction_and_discharge(
+    settled: Callable[..., MachineOutcome], machine_of: Callable[..., Machine], name: str
+) -> None:
+    # P3: suction < wall < discharge, a quarter to a bit over half of the way, at every end
     got = settled(name)
-    for cylinder in got.cylinders:
-        stage = next(
-            s for s in got.stages if abs(s.discharge_temperature_k - cylinder.delivered_temperature_k) < 3.0
-        )
-        wall = np.mean([e.wall_temperature_k for e in cylinder.ends])
-        share = (wall - stage.suction_temperature_k) / (
-            cylinder.delivered_temperature_k - stage.suction_temperature_k
-        )
-        assert 0.25 <= share <= 0.55, (cylinder.number, share)
+    for stage, nameplate in zip(got.stages, machine_of(name).unit.stages, strict=True):
+        for number in (c.number for c in nameplate.cylinders):
+            cylinder, low = got.cylinder(number), stage.suction_temperature_k
+            for e in cylinder.ends:
+                assert low < e.wall_temperature_k < cylinder.delivered_temperature_k
+                share = (e.wall_temperature_k - low) / (cylinder.delivered_temperature_k - low)
+                assert 0.25 <= share <= 0.55, (number, e.side, share)
 
 
 def test_head_ends_held_open_leave_half_the_flow_and_the_known_reversal(
@@ -182,7 +215,7 @@ def test_reversal_with_one_unloaded_end_falls_with_ratio_and_speed(
 
 @pytest.mark.slow
 @pytest.mark.parametrize("name", ["K-110", "K-220", "K-330"])
-def test_half_the_steps_change_little(settled: Callable[..., MachineOutcome], name: str) -> None:
+def test_four_times_the_steps_change_little(settled: Callable[..., MachineOutcome], name: str) -> None:
     coarse, fine = settled(name), settled(name, steps=7200)
     assert coarse.export_flow_mol_s == pytest.approx(fine.export_flow_mol_s, rel=3e-3)
     assert coarse.indicated_power_w == pytest.approx(fine.indicated_power_w, rel=3e-3)
@@ -198,12 +231,13 @@ def test_coarse_steps_never_break_down(
 ) -> None:
     usual = USUAL[name]
     stages = {"K-110": 1, "K-220": 3, "K-330": 2}[name]
-    for ratio in (1.2, 2.0, 3.5, 5.0):
+    for ratio in (1.2, 2.0, 3.5, 5.0):  # of every stage: where that is too much, the suction is lower
+        low = min(usual.suction_pressure_pa, 300e5 / ratio**stages)
         for faster in (1.0, 1.1):
             around = replace(
                 usual, saturation=0.0, composition=request.getfixturevalue(gas),
-                speed_rad_s=usual.speed_rad_s * faster,
-                discharge_pressure_pa=min(300e5, usual.suction_pressure_pa * ratio**stages),
+                speed_rad_s=usual.speed_rad_s * faster, suction_pressure_pa=low,
+                discharge_pressure_pa=low * ratio**stages,
             )  # fmt: skip
             got = machine_of(name, around=around, steps=720).run(40)
             assert math.isfinite(got.indicated_power_w + got.export_flow_mol_s)
@@ -213,15 +247,15 @@ def test_coarse_steps_never_break_down(
 
 @pytest.mark.slow
 @pytest.mark.parametrize("name", ["K-110", "K-220", "K-330"])
-def test_periodic_within_sixty_turns(
-    machine_of: Callable[..., Machine], settled: Callable[..., MachineOutcome], name: str
-) -> None:
+def test_periodic_within_sixty_turns(machine_of: Callable[..., Machine], name: str) -> None:
     machine = machine_of(name)
     for _ in range(6):
-        got = machine._turns(10, 0.5)
-    for one, other in zip(got.stages, settled(name).stages, strict=True):
-        assert one.suction_pressure_pa == pytest.approx(other.suction_pressure_pa, rel=1.5e-3)
-        assert one.discharge_pressure_pa == pytest.approx(other.discharge_pressure_pa, rel=1.5e-3)
+        got = machine.hasten(10)
+    machine.hasten(60)
+    at_rest = machine.hasten(20)
+    for one, other in zip(got.stages, at_rest.stages, strict=True):
+        assert one.suction_pressure_pa == pytest.approx(other.suction_pressure_pa, rel=1e-3)
+        assert one.discharge_pressure_pa == pytest.approx(other.discharge_pressure_pa, rel=1e-3)
 
 
 def test_walls_lag_in_a_live_run_and_not_while_settling(machine_of: Callable[..., Machine]) -> None:
