@@ -8,12 +8,12 @@ from typing import Final
 import numpy as np
 from numpy.typing import NDArray
 
+from agent.accuracy import accuracy_of
 from agent.database import CACHE_FOLDER
 from agent.records import DerivedRow, Frame, Quality
 from agent.siteplan.plan import SitePlan, UnitPlan
 from agent.storage.sqlite_series import SeriesReader
 from agent.stored_site import StoredSites
-from agent.unit_line import accuracy_of
 from model.budget import Share, budget
 from model.corrections import Corrections
 from model.errors import NotEvaluatedError

@@ -6,11 +6,12 @@ from collections.abc import Iterable, Iterator, Sequence
 import numpy as np
 from numpy.typing import NDArray
 
+from agent.accuracy import accuracy_of
 from agent.manipulation.running import RunningState
 from agent.records import DerivedRow, Frame, Quality, RunState
 from agent.siteplan.plan import UnitPlan
 from model.calibration import Calibration
-from model.evaluate import InputAccuracy, Measured
+from model.evaluate import Measured
 from model.jacobian import JacobianKeeper
 from model.nuisances import calibrated, calibration_nuisances
 from model.quantities import series_name
@@ -27,15 +28,6 @@ _MASK = {
     RunState.NOT_KNOWN: Quality.INPUT_MISSING,
     RunState.STOPPED: Quality.NOT_RUNNING,
 }
-
-
-def accuracy_of(plan: UnitPlan) -> InputAccuracy:
-    """What the inputs of a unit are worth; one address read twice is one error."""
-    return InputAccuracy.from_limits(
-        plan.input_names(),
-        [i.accuracy for i in plan.inputs],
-        [f"{i.source} {i.address}" for i in plan.inputs],
-    )
 
 
 class UnitLine:
