@@ -134,7 +134,7 @@ def _judge(
         earlier = [
             (x, matches[i])
             for i, x in enumerate(truth.expected_first[:place])
-            if x.unit == expected.unit and (x.needs is None or x.needs in in_reach)
+            if x.unit == expected.unit and x.needs is None and expected.needs is None
         ]
         behind = next((x for x, e in earlier if e is None or e.tick > event.tick), None)
         if event.tick > run.due_s(expected) + TICK_S:

@@ -115,7 +115,7 @@ class Truth(_Text):
 
     story: str
     what_happens: tuple[Happening, ...]
-    expected_first: tuple[Expected, ...] = ()  # in the order in which they must come
+    expected_first: tuple[Expected, ...] = ()  # alarms of one unit in the order in which they must come
     must_not: tuple[Pattern, ...] = ()  # what is expected, or may come, is never forbidden
     may: tuple[Pattern, ...] = ()  # follows from what happens; neither wanted nor forbidden
 

@@ -52,7 +52,9 @@ def test_what_comes_in_time_and_in_order_is_found() -> None:
     assert found.lines[0].subject == "cylinder2"
 
 
-@pytest.mark.parametrize("story", ["sinking-suction", "wrong-ends", "first-light", "dry-cooler"])
+@pytest.mark.parametrize(
+    "story", ["sinking-suction", "wrong-ends", "first-light", "dry-cooler", "night-break"]
+)
 def test_silent_agent_misses_what_it_should_have_said(story: str) -> None:
     found = score(truth_of(story), [], told())
     assert found.failed
@@ -115,9 +117,10 @@ def test_repeated_find_is_extra_and_does_no_harm() -> None:
 
 
 def test_what_follows_from_the_story_is_extra_and_does_no_harm() -> None:
+    load = event("K-220", "gas_load_compression", 9_700, "cylinder3")
     healthy_stage = event("K-220", "discharge_temperature", 10_000, "stage2")
-    found = score(truth_of("night-break"), [healthy_stage], told())
-    assert verdicts(found) == [V.NOT_IN_REACH, V.EXTRA]
+    found = score(truth_of("night-break"), [load, healthy_stage], told())
+    assert verdicts(found) == [V.FOUND, V.NOT_IN_REACH, V.EXTRA]
     assert not found.failed
 
 
@@ -130,7 +133,7 @@ def test_what_needs_drift_detection_is_not_yet_in_reach() -> None:
 
 
 @pytest.mark.parametrize(
-    "story", ["hidden-leak", "night-break", "heavier-gas", "creeping-gauge", "half-repair", "passing-recycle"]
+    "story", ["hidden-leak", "heavier-gas", "creeping-gauge", "half-repair", "passing-recycle"]
 )
 def test_silence_is_blamed_only_on_who_claims_drift_detection(story: str) -> None:
     assert score(truth_of(story), [], told()).words == "not yet in reach"
