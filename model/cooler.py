@@ -30,7 +30,8 @@ def transfer_units(effectiveness: ArrayLike) -> Array:
     ----------
     W. M. Kays, A. L. London, *Compact Heat Exchangers*, for a capacity ratio of zero.
     """
-    return np.asarray(-np.log1p(-np.asarray(effectiveness, np.float64)))
+    with np.errstate(divide="ignore"):  # a perfect cooler has no end of them
+        return np.asarray(-np.log1p(-np.asarray(effectiveness, np.float64)))
 
 
 def effectiveness_at(design_effectiveness: ArrayLike, load: ArrayLike) -> Array:

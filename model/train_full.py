@@ -86,7 +86,7 @@ class FullStages:
 
     def _held(self, k: int, temperature: Array, pressure: Array) -> Array:
         if not self._boundary.water.any():
-            return np.full(temperature.shape, np.inf)
+            return np.ones(temperature.shape)  # any: a dry gas has none to lose
         gas, composition = self._gas, self._unit.composition
         factor = enhancement_factor(gas, composition, temperature, pressure)
         self.took.enhancement[:, k] = factor

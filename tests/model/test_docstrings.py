@@ -8,15 +8,18 @@ from collections.abc import Callable, Iterator
 import pytest
 
 MODULES = (
-    "budget", "calibration", "curves", "cycle", "dew", "evaluate", "gas", "jacobian", "kinematics", "margins",
-    "monte_carlo", "nuisances", "propagation", "rodload", "stage", "surface", "teaching", "throw",
-    "uncertainty", "valves",
+    "budget", "calibration", "cooler", "curves", "cycle", "dew", "driver", "evaluate", "gas", "jacobian",
+    "kinematics", "margins", "monte_carlo", "nuisances", "propagation", "relative_capacity", "rodload",
+    "stage", "stage_work", "surface", "teaching", "throw", "train", "train_full", "train_sketch",
+    "train_streams", "uncertainty", "valves", "wet",
 )  # fmt: skip
 NUMBERS = re.compile(r"^(float|array_like|ndarray(?! of bool)|int|sequence of float)\b")
 UNIT = re.compile(r"\[[^\]]+\]")
 # plumbing between modules: no formula, nothing to cite
 PLUMBING = {"load_or_build", "normalised", "nodes", "tabulate", "end_runs", "opening_angles", "stage_frame",
-            "held_open", "stage_inputs", "margin", "share_left", "uncertain_results", "table"}  # fmt: skip
+            "held_open", "stage_inputs", "margin", "share_left", "uncertain_results", "table",
+            "alike", "lines_of", "providers", "redrawn", "rough_sketch", "stage_ends", "start_of",
+            "unknowns"}  # fmt: skip
 
 
 def public_functions() -> Iterator[tuple[str, Callable[..., object]]]:
