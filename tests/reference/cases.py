@@ -10,7 +10,7 @@ from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from enum import StrEnum
 
-from tests.reference import gases, textbook, throws
+from tests.reference import gases, textbook, throws, trains
 
 RPM = math.pi / 30
 DEG = math.pi / 180
@@ -23,6 +23,7 @@ class Topic(StrEnum):
     DISCHARGE_TEMPERATURE = "discharge temperature"
     KINEMATICS_AND_ROD_LOAD = "kinematics and rod load"
     POWER = "power"
+    TRAIN = "train"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -37,7 +38,7 @@ class Case:
     reason: str  # of the tolerance
 
 
-GAS, EFFICIENCY, HEAT, ROD, POWER = tuple(Topic)
+GAS, EFFICIENCY, HEAT, ROD, POWER, TRAIN = tuple(Topic)
 
 BOOKS = "copied in FOSSEE Python-Textbook-Companions"
 NIST = "NIST, AGA8 repository (github.com/usnistgov/AGA8)"
@@ -72,6 +73,19 @@ NAG_3 = {
     "bore": textbook.swept_bore(2000e-6, 0.15), "stroke": 0.15, "speed": 800 * RPM, "clearance": 0.05,
     "n": 1.25, "p1": 101.3e3, "p2": 8 * 101.3e3,
 }  # fmt: skip
+JOEL_3 = {
+    "p1": 1e5, "p2": 15e5, "t1": 291.0, "n": 1.3, "gas_constant": 290.0, "clearance": 0.05,
+    "swept": math.pi / 4 * 0.45**2 * 0.3,
+}  # fmt: skip
+SINGH_13 = {
+    "p1": 1e5, "p2": 20e5, "t1": 300.0, "n": 1.25, "gas_constant": 287.0, "clearance": 0.04,
+    "swept": math.pi / 4 * 0.3**2 * 0.2,
+}  # fmt: skip
+SINGH_8 = {
+    "p1": 1e5, "p2": 25e5, "t1": 290.0, "n": 1.25, "gas_constant": 287.0, "low_clearance": 0.04,
+    "high_clearance": 0.05, "low_volume": 0.019342, "high_volume": 4.024e-3, "speed": 200 * RPM,
+}  # fmt: skip
+NAG_7 = {"p1": 1e5, "p2": 9e5, "t1": 300.0, "n": 1.3}
 KHURMI_4 = {"stroke": 0.6, "rod": 1.5, "speed": 180 * RPM, "angle": 40 * DEG}
 
 
@@ -281,4 +295,94 @@ THROW_CASES = (
     ),
 )  # fmt: skip
 
-CASES = (*GAS_CASES, *CYCLE_CASES, *THROW_CASES)
+SIZED = "stages swept as the pressures stand that share the work evenly; half of the last digit printed"
+
+TRAIN_CASES = (
+    Case(
+        name="first pressure between of example 14.3 [bar]", topic=TRAIN, source=f"{JOEL}, p. 409",
+        outcome=trains.second_pressure_of_three, inputs=_subset(JOEL_3, "p1", "p2"),
+        expected=2.466, tolerance=6e-4, reason=SIZED,
+    ),
+    Case(
+        name="second pressure between of example 14.3 [bar]", topic=TRAIN, source=f"{JOEL}, p. 409",
+        outcome=trains.third_pressure_of_three, inputs=_subset(JOEL_3, "p1", "p2"),
+        expected=6.082, tolerance=6e-4, reason=SIZED,
+    ),
+    Case(
+        name="volume drawn in of example 14.3 [l]", topic=TRAIN, source=f"{JOEL}, p. 409",
+        outcome=trains.drawn_litres_of_three, inputs=_subset(JOEL_3, "p1", "p2", "n", "clearance", "swept"),
+        expected=45.32, tolerance=6e-3, reason=DIGITS,
+    ),
+    Case(
+        name="volume delivered of example 14.3 [l]", topic=TRAIN, source=f"{JOEL}, p. 409",
+        outcome=trains.delivered_litres_of_three,
+        inputs=_subset(JOEL_3, "p1", "p2", "n", "clearance", "swept"), expected=3.72, tolerance=6e-3,
+        reason=DIGITS,
+    ),
+    Case(
+        name="work of example 14.3 [kJ/kg]", topic=TRAIN, source=f"{JOEL}, p. 409",
+        outcome=trains.work_of_three, inputs=_subset(JOEL_3, "p1", "p2", "t1", "n", "gas_constant"),
+        expected=254.1, tolerance=0.1, reason=DIGITS,
+    ),
+    Case(
+        name="first pressure between of example 16.13 [bar]", topic=TRAIN, source=f"{SINGH}, p. 759",
+        outcome=trains.second_pressure_of_three, inputs=_subset(SINGH_13, "p1", "p2"),
+        expected=2.714, tolerance=6e-4, reason=SIZED,
+    ),
+    Case(
+        name="second pressure between of example 16.13 [bar]", topic=TRAIN, source=f"{SINGH}, p. 759",
+        outcome=trains.third_pressure_of_three, inputs=_subset(SINGH_13, "p1", "p2"),
+        expected=7.368, tolerance=6e-4, reason=SIZED,
+    ),
+    Case(
+        name="volume drawn in of example 16.13 [l]", topic=TRAIN, source=f"{SINGH}, p. 759",
+        outcome=trains.drawn_litres_of_three, inputs=_subset(SINGH_13, "p1", "p2", "n", "clearance", "swept"),
+        expected=13.45, tolerance=6e-3, reason=DIGITS,
+    ),
+    Case(
+        name="last temperature of example 16.13 [K]", topic=TRAIN, source=f"{SINGH}, p. 759",
+        outcome=trains.last_temperature_of_three, inputs=_subset(SINGH_13, "p1", "p2", "t1", "n"),
+        expected=366.32, tolerance=0.02, reason=DIGITS,
+    ),
+    Case(
+        name="volume delivered of example 16.13 [l]", topic=TRAIN, source=f"{SINGH}, p. 759",
+        outcome=trains.delivered_litres_of_three,
+        inputs=_subset(SINGH_13, "p1", "p2", "n", "clearance", "swept"), expected=0.82089, tolerance=1e-4,
+        reason=DIGITS,
+    ),
+    Case(
+        name="work of example 16.13 [kJ/kg]", topic=TRAIN, source=f"{SINGH}, p. 759",
+        outcome=trains.work_of_three, inputs=_subset(SINGH_13, "p1", "p2", "t1", "n", "gas_constant"),
+        expected=285.49, tolerance=0.06, reason=DIGITS,
+    ),
+    Case(
+        name="pressure between of example 16.8, from the sizes [bar]", topic=TRAIN, source=f"{SINGH}, p. 752",
+        outcome=trains.pressure_between,
+        inputs=_subset(SINGH_8, "p1", "p2", "n", "low_clearance", "high_clearance", "low_volume",
+                       "high_volume"),
+        expected=5.0, tolerance=2e-3, reason="the sizes are printed with four digits",
+    ),
+    Case(
+        name="mass flow of example 16.8, from the sizes [kg/min]", topic=TRAIN, source=f"{SINGH}, p. 752",
+        outcome=trains.mass_per_minute, inputs=SINGH_8, expected=4.0, tolerance=2e-3,
+        reason="the sizes are printed with four digits",
+    ),
+    Case(
+        name="power of example 16.8, from the sizes [kW]", topic=TRAIN, source=f"{SINGH}, p. 752",
+        outcome=trains.two_stage_power,
+        inputs={name: value for name, value in SINGH_8.items() if name not in {"t1", "gas_constant"}},
+        expected=28.26 * 0.7457, tolerance=0.02, reason="the book's 28.26 hp of 0.7457 kW, four digits",
+    ),
+    Case(
+        name="work of example 19.7 [kJ/kg]", topic=TRAIN, source=NAG,
+        outcome=trains.work_of_two, inputs=NAG_7 | {"gas_constant": 287.0}, expected=215.32, tolerance=0.05,
+        reason=DIGITS,
+    ),
+    Case(
+        name="heat of the cooler of example 19.7 [kJ/kg]", topic=TRAIN, source=NAG,
+        outcome=trains.cooling_of_two, inputs=NAG_7 | {"heat_capacity": 1.005}, expected=87.0, tolerance=0.02,
+        reason=DIGITS,
+    ),
+)  # fmt: skip
+
+CASES = (*GAS_CASES, *CYCLE_CASES, *THROW_CASES, *TRAIN_CASES)
