@@ -35,7 +35,8 @@ def test_leaking_valve_heats_the_gas_and_costs_capacity(
     settled: Callable[..., MachineOutcome], kind: FaultKind, side: Side
 ) -> None:
     healthy, faulty = change(settled, "K-110", Fault(kind=kind, size=0.001, cylinder=1, side=side))
-    # between headers whose pressures stay
+    # source: Bloch and Hoefner, Reciprocating Compressors (1996), page 336:
+    # discharge temperature up, capacity down; between headers whose pressures stay
     assert faulty.stages[0].discharge_temperature_k > healthy.stages[0].discharge_temperature_k + 1.0
     assert faulty.export_flow_mol_s < 0.985 * healthy.export_flow_mol_s
     assert faulty.cylinder(1).delivered_temperature_k > healthy.cylinder(1).delivered_temperature_k + 2.5
@@ -46,6 +47,8 @@ def test_cover_of_the_leaking_suction_valve_is_the_hot_one(settled: Callable[...
     healthy, faulty = change(
         settled, "K-110", Fault(kind=K.SUCTION_VALVE_LEAK, size=0.001, cylinder=1, side=HEAD)
     )
+    # source: Bloch and Hoefner, Reciprocating Compressors (1996), page 336:
+    # the cover of the leaking valve is the hot one
     rise = {
         (n, side): end(faulty, n, side).suction_passage_temperature_k
         - end(healthy, n, side).suction_passage_temperature_k
@@ -58,6 +61,7 @@ def test_cover_of_the_leaking_suction_valve_is_the_hot_one(settled: Callable[...
 
 def test_leaking_rings_heat_both_ends_and_no_single_one(settled: Callable[..., MachineOutcome]) -> None:
     healthy, faulty = change(settled, "K-110", Fault(kind=K.RING_LEAK, size=0.001, cylinder=1))
+    # common practice: both ends warmer, no single hot cover, capacity down
     for side in Side:
         rise = end(faulty, 1, side).delivered_temperature_k - end(healthy, 1, side).delivered_temperature_k
         assert rise > 3.0
@@ -69,6 +73,7 @@ def test_leaking_packing_vents_crank_end_gas_and_leaves_temperature_alone(
     settled: Callable[..., MachineOutcome],
 ) -> None:
     healthy, faulty = change(settled, "K-110", Fault(kind=K.PACKING_LEAK, size=0.0001, cylinder=1))
+    # common practice: vent flow up, a slight loss of capacity
     lost = healthy.export_flow_mol_s - faulty.export_flow_mol_s
     assert healthy.cylinder(1).packing_flow_mol_s == 0.0
     assert faulty.cylinder(1).packing_flow_mol_s > 0.5
@@ -83,6 +88,8 @@ def test_leaking_packing_vents_crank_end_gas_and_leaves_temperature_alone(
 def test_leak_in_the_second_stage_raises_the_pressure_that_feeds_it(
     settled: Callable[..., MachineOutcome], kind: FaultKind
 ) -> None:
+    # source: Bloch and Hoefner, Reciprocating Compressors (1996), page 336:
+    # the pressure that feeds the stage rises, that behind it falls
     healthy, faulty = change(settled, "K-330", Fault(kind=kind, size=0.001, cylinder=3, side=HEAD))
     assert faulty.stages[1].suction_pressure_pa > 1.01 * healthy.stages[1].suction_pressure_pa
     assert faulty.export_flow_mol_s < healthy.export_flow_mol_s
@@ -91,6 +98,7 @@ def test_leak_in_the_second_stage_raises_the_pressure_that_feeds_it(
 
 
 def test_unloader_that_sticks_open_takes_its_end_out(settled: Callable[..., MachineOutcome]) -> None:
+    # common practice: capacity and power step without a command
     fault = Fault(kind=K.UNLOADER_STUCK_OPEN, size=1.0, cylinder=1, side=HEAD)
     healthy, faulty = change(settled, "K-110", fault)
     assert faulty.export_flow_mol_s == pytest.approx(0.74 * healthy.export_flow_mol_s, rel=0.03)
@@ -120,6 +128,7 @@ def test_fouled_cooler_warms_the_next_suction_and_its_discharge_at_the_same_rati
     settled: Callable[..., MachineOutcome],
 ) -> None:
     healthy, faulty = change(settled, "K-330", Fault(kind=K.COOLER_FOULING, size=0.3, stage=1))
+    # common practice: the next suction warmer, its discharge too at the same ratio
     before, after = healthy.stages[1], faulty.stages[1]
     assert after.suction_temperature_k > before.suction_temperature_k + 3.0
     assert after.discharge_temperature_k > before.discharge_temperature_k + 3.0
@@ -138,6 +147,8 @@ def test_lost_cooling_water_is_a_worse_fouling(settled: Callable[..., MachineOut
 def test_plugged_strainer_lowers_suction_pressure_and_raises_ratio_and_temperature(
     settled: Callable[..., MachineOutcome],
 ) -> None:
+    # source: Bloch and Hoefner, Reciprocating Compressors (1996), page 304: suction pressure down, ratio and
+    # discharge temperature up
     healthy, faulty = change(settled, "K-110", Fault(kind=K.STRAINER_PLUGGING, size=0.7))
     before, after = healthy.stages[0], faulty.stages[0]
     assert after.suction_pressure_pa < 0.98 * before.suction_pressure_pa
@@ -197,36 +208,6 @@ def test_broken_suction_valve_takes_the_reversal_away(settled: Callable[..., Mac
     # source: a technical article on reversal: failure of the suction valves of one end can remove it
     assert math.degrees(healthy.cylinder(1).reversal.angle_rad) > 160.0
     assert math.degrees(faulty.cylinder(1).reversal.angle_rad) < 100.0
-
-
-@pytest.mark.slow
-def test_signatures_of_the_three_stage_machine(settled: Callable[..., MachineOutcome]) -> None:
-    # source: an earlier prototype of the same equations by another hand, tag change from healthy:
-    # stage 2 pressure %, stage 3 pressure %, export flow %, power %
-    leaks = {
-        Fault(kind=K.SUCTION_VALVE_LEAK, size=0.001, cylinder=1, side=HEAD): (-5.4, -4.7, -5.5, -3.4),
-        Fault(kind=K.DISCHARGE_VALVE_LEAK, size=0.001, cylinder=1, side=HEAD): (-6.5, -5.7, -6.7, -3.5),
-        Fault(kind=K.RING_LEAK, size=0.001, cylinder=1): (-9.1, -7.9, -9.3, -5.1),
-        Fault(kind=K.SUCTION_VALVE_LEAK, size=0.001, cylinder=3, side=HEAD): (8.4, -1.7, -1.9, 1.6),
-        Fault(kind=K.DISCHARGE_VALVE_LEAK, size=0.001, cylinder=3, side=HEAD): (10.5, -2.2, -2.5, 3.0),
-        Fault(kind=K.RING_LEAK, size=0.001, cylinder=3): (14.7, -2.9, -3.5, 3.2),
-        Fault(kind=K.RING_LEAK, size=0.001, cylinder=4): (2.9, 17.8, -0.6, 4.9),
-        Fault(kind=K.PACKING_LEAK, size=0.0001, cylinder=3): (-0.8, -1.8, -2.0, -0.9),
-        Fault(kind=K.POCKET_OPEN, size=0.15, cylinder=1, side=HEAD): (-2.6, -2.3, -2.6, -2.6),
-        Fault(kind=K.POCKET_OPEN, size=0.15, cylinder=4, side=HEAD): (0.6, 3.7, -0.1, -0.1),
-    }
-    healthy = settled("K-220")
-    for fault, expected in leaks.items():
-        faulty = settled("K-220", fault)
-        pairs = [
-            (faulty.stages[1].suction_pressure_pa, healthy.stages[1].suction_pressure_pa),
-            (faulty.stages[2].suction_pressure_pa, healthy.stages[2].suction_pressure_pa),
-            (faulty.export_flow_mol_s, healthy.export_flow_mol_s),
-            (faulty.indicated_power_w, healthy.indicated_power_w),
-        ]
-        for (after, before), percent in zip(pairs, expected, strict=True):
-            got = 100.0 * (after / before - 1.0)
-            assert got == pytest.approx(percent, rel=0.2, abs=0.25), (fault, got, percent)
 
 
 def test_every_kind_of_fault_has_a_rule() -> None:
