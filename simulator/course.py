@@ -1,6 +1,6 @@
 """How the things of a story go over time: ramps, words that switch, gases that mix, faults that grow.
 
-Times are real seconds since the story began. Everything answers for one instant or for an array of them.
+Times are real seconds since the story began. A course answers for one instant or for an array of them.
 """
 
 import math

@@ -26,6 +26,7 @@ from simulator.course import (
     link_state,
 )
 from simulator.instrument_faults import LinkState
+from simulator.scenario_fit import header_faults, instrument_size, misfits
 from simulator.scenario_text import (
     NUMBERS,
     Change,
@@ -35,8 +36,6 @@ from simulator.scenario_text import (
     ScenarioText,
     When,
     fault_words,
-    instrument_size,
-    misfits,
 )
 
 
@@ -65,10 +64,14 @@ class Scenario:
         """The story as it is told so many times faster."""
         if not pace > 0:
             raise ValueError(f"pace {pace} is not above zero")
+        units = {u.id: _unit_course(self.text, self.site, u.id, pace) for u in self.site.units}
+        # At another pace other things coincide, since some times are not hurried.
+        if faults := header_faults(units):
+            raise ValueError(f"{self.name} at pace {pace:g}: {'; '.join(faults)}")
         return Story(
             scenario=self,
             pace=pace,
-            units={u.id: _unit_course(self.text, self.site, u.id, pace) for u in self.site.units},
+            units=units,
             links=tuple(_spell(link, pace) for link in self.text.links),
         )
 
@@ -127,6 +130,8 @@ def load_scenario(path: Path, site: SitePlan) -> Scenario:
     except ValidationError as error:
         raise ScenarioError(path, [fault_words(e["loc"], e["msg"]) for e in error.errors()]) from None
     if faults := misfits(text, site):
+        raise ScenarioError(path, faults)
+    if faults := header_faults({u.id: _unit_course(text, site, u.id, 1.0) for u in site.units}):
         raise ScenarioError(path, faults)
     return Scenario(name=path.stem, text=text, site=site)
 

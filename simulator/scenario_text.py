@@ -1,4 +1,4 @@
-"""The text of a scenario file: which entries there are, what each may say, what is said of a wrong one."""
+"""The text of a scenario file: which entries there are and what each may say, whatever the site."""
 
 from collections.abc import Mapping, Sequence
 from types import MappingProxyType
@@ -6,12 +6,11 @@ from typing import Annotated, Final
 
 from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, model_validator
 
-from agent.siteplan.plan import Input, SitePlan
 from model.machine import Side
-from model.quantities import QUANTITIES
-from model.units import conversion, parse
+from model.units import UnitError, parse
 from simulator.course import Growth
-from simulator.faults import Fault, FaultError, FaultKind, Faults
+from simulator.faults import Fault, FaultError, FaultKind
+from simulator.gas_data import GASES, WATER
 from simulator.instrument_faults import InstrumentFaultKind, LinkFaultKind
 
 # variable of a scenario file -> (field of Surroundings, or the ambient, and the dimension of its text)
@@ -31,7 +30,6 @@ NUMBERS: Final[Mapping[str, tuple[str, str]]] = MappingProxyType(
 )
 _SWITCHES: Final = ("load_step", "running")
 _GAS: Final = "composition"
-_DIFFERENCES: Final = frozenset({InstrumentFaultKind.BIAS, InstrumentFaultKind.SPIKES})
 
 
 def _seconds(text: object) -> float:
@@ -47,6 +45,7 @@ def _signed_seconds(text: object) -> float:
 
 
 Seconds = Annotated[float, BeforeValidator(_seconds), Field(ge=0)]
+SomeSeconds = Annotated[float, BeforeValidator(_seconds), Field(gt=0)]
 
 
 class _Text(BaseModel):
@@ -129,7 +128,7 @@ class LinkText(When):
 
     source: str
     fault: LinkFaultKind
-    lasts: Annotated[Seconds, Field(alias="for")]
+    lasts: Annotated[SomeSeconds, Field(alias="for")]
     lasts_unhurried: Annotated[Seconds, Field(alias="for_unhurried")] = 0.0
     buffered: bool = False
     by: Annotated[float, BeforeValidator(_signed_seconds)] = 0.0
@@ -139,6 +138,10 @@ class LinkText(When):
         wants = self.fault in {LinkFaultKind.LATE, LinkFaultKind.SKEWED}
         if wants and self.by == 0.0:
             raise ValueError(f"by: a link that is {self.fault} needs to say by how much")
+        if self.by != 0.0 and not wants:
+            raise ValueError(f"by: a link that is {self.fault} has no amount")
+        if self.buffered and self.fault is not LinkFaultKind.LOST:
+            raise ValueError("buffered: only a lost link keeps anything")
         if self.fault is LinkFaultKind.LATE and self.by < 0.0:
             raise ValueError("by: nothing arrives before it was sent")
         if self.lasts_unhurried > self.lasts:
@@ -156,7 +159,7 @@ class ScenarioText(_Text):
     """A whole file."""
 
     title: str
-    length: Seconds | None = None
+    length: SomeSeconds | None = None
     changes: tuple[Change, ...] = ()
     faults: tuple[FaultText, ...] = ()
     instruments: tuple[InstrumentText, ...] = ()
@@ -164,13 +167,22 @@ class ScenarioText(_Text):
     timetable: tuple[Happening, ...] = ()
     repeat: When | None = None
 
+    @model_validator(mode="after")
+    def _round_takes_time(self) -> "ScenarioText":
+        if self.repeat is not None and not self.repeat.at > 0.0:
+            raise ValueError("repeat: a round takes some time")
+        return self
+
 
 def _value(variable: object, value: object, *, ramp: bool) -> object:
     """The value of a change in SI, a composition, a load-step word, or running."""
-    if variable in NUMBERS:
+    if isinstance(variable, str) and variable in NUMBERS:
         if not isinstance(value, str):
             raise ValueError(f"to: expected text with a unit, such as '26 bara', got {value!r}")
-        return parse(value, NUMBERS[str(variable)][1])
+        try:
+            return parse(value, NUMBERS[variable][1])
+        except UnitError as error:
+            raise ValueError(f"to: {error}") from None
     if variable == _GAS:
         return _composition(value)
     if variable not in _SWITCHES:
@@ -186,98 +198,18 @@ def _value(variable: object, value: object, *, ramp: bool) -> object:
 
 
 def _composition(value: object) -> dict[str, float]:
-    if (
-        not isinstance(value, dict)
-        or not value
-        or not all(isinstance(v, float | int) for v in value.values())
-    ):
+    if not isinstance(value, dict) or not value or not all(_is_share(v) for v in value.values()):
         raise ValueError(f"to: expected mole fractions such as {{methane: 0.9, ethane: 0.1}}, got {value!r}")
-    if abs(sum(value.values()) - 1.0) > 1e-6 or min(value.values()) < 0.0:
+    dry = sorted(GASES.keys() - {WATER})
+    if strange := [str(name) for name in value if name not in dry]:
+        raise ValueError(f"to: no such gas: {', '.join(strange)}; known: {', '.join(dry)}")
+    if not abs(sum(value.values()) - 1.0) <= 1e-6:
         raise ValueError("to: the mole fractions are not shares of one")
     return {str(name): float(share) for name, share in value.items()}
 
 
-def instrument_size(entry: InstrumentText, site: SitePlan) -> float:
-    """Size of an instrument's fault: a difference in SI, a factor, or 1 and 0 for yes and no.
-
-    Raises
-    ------
-    ValueError
-        The text does not fit the fault or the tag.
-    """
-    tag = _tag(entry, site)
-    if entry.fault in _DIFFERENCES:
-        if not isinstance(entry.to, str):
-            raise ValueError(f"to: expected a difference with a unit, such as '1 bar', got {entry.to!r}")
-        return _difference(entry.to, tag)
-    if entry.fault is InstrumentFaultKind.WRONG_SPAN:
-        if isinstance(entry.to, bool) or not isinstance(entry.to, float):
-            raise ValueError(f"to: expected a factor such as 1.05, got {entry.to!r}")
-        return entry.to
-    if not isinstance(entry.to, bool):
-        raise ValueError(f"to: expected true or false, got {entry.to!r}")  # noqa: TRY004 - as above
-    if entry.over:
-        raise ValueError(f"over: {entry.fault} comes at once, it has no ramp")
-    return float(entry.to)
-
-
-def _difference(text: str, tag: Input) -> float:
-    """A difference such as ``-1 bar``: offsets of the unit do not count."""
-    number, _, unit = text.strip().partition(" ")
-    dimension = QUANTITIES[tag.quantity].dimension
-    unit = {"bar": "bara", "C": "degC"}.get(unit, unit)
-    scale = conversion(unit, dimension, barometer_pa=0.0)
-    return scale.to_si(float(number)) - scale.to_si(0.0)
-
-
-def _tag(entry: InstrumentText, site: SitePlan) -> Input:
-    unit = next((u for u in site.units if u.id == entry.unit), None)
-    found = next((i for i in unit.inputs if i.tag == entry.tag), None) if unit is not None else None
-    if found is None:
-        known = ", ".join(i.tag for i in unit.inputs) if unit is not None else "none"
-        raise ValueError(f"tag: {entry.unit} has no {entry.tag!r}; it has: {known}")
-    return found
-
-
-def misfits(text: ScenarioText, site: SitePlan) -> list[str]:
-    """What the file says of units, steps, places, tags and sources that the site does not have."""
-    units = {u.id: u.unit for u in site.units}
-    said: list[str] = []
-    everything: tuple[tuple[str, Sequence[Change | FaultText | InstrumentText]], ...] = (
-        ("changes", text.changes),
-        ("faults", text.faults),
-        ("instruments", text.instruments),
-    )
-    for kind, entries in everything:
-        said += [
-            f"{kind}[{i}]: unit: {e.unit!r} is no unit of this site; known: {', '.join(units)}"
-            for i, e in enumerate(entries)
-            if e.unit not in units
-        ]
-    if said:
-        return said
-    for i, change in enumerate(text.changes):
-        words = [s.word for s in units[change.unit].load_steps]
-        if change.variable == "load_step" and change.to not in words:
-            said.append(
-                f"changes[{i}]: to: {change.to!r} is no load step of {change.unit}; known: {', '.join(words)}"
-            )
-    for i, fault in enumerate(text.faults):
-        try:
-            Faults(present=(fault.value(),)).check(units[fault.unit])
-        except FaultError as error:
-            said.append(f"faults[{i}]: {error}")
-    for i, entry in enumerate(text.instruments):
-        try:
-            instrument_size(entry, site)
-        except (ValueError, KeyError) as error:
-            said.append(f"instruments[{i}]: {error}")
-    said += [
-        f"links[{i}]: source: {link.source!r} is no source of this site; known: {', '.join(site.sources)}"
-        for i, link in enumerate(text.links)
-        if link.source not in site.sources
-    ]
-    return said
+def _is_share(value: object) -> bool:
+    return isinstance(value, float | int) and not isinstance(value, bool) and 0.0 <= value <= 1.0
 
 
 def fault_words(location: Sequence[int | str], message: str) -> str:
