@@ -79,6 +79,11 @@ def solve_train(
     evaluated in full, until the full balances close. The answer hangs on its own frame alone: frames in
     other company differ by less than the tolerance.
 
+    Several services on one frame are several trains: solve each with a nameplate of its own stages.
+
+    Ends that are held open warm the gas in the suction bottle: a tag there has their work in it, and the
+    discharge temperature here has it once.
+
     Water is carried beside the gas: its moles count where gas is drawn, its small effect on density and
     heat is left out (below 0.1 % at one mole per hundred).
 
