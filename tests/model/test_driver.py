@@ -13,6 +13,7 @@ from model.driver import (
     motor_losses,
     slipping_speed,
 )
+from simulator.ostmere import EQUIPMENT
 
 MOTOR = DriverCurve(
     rated_power_w=2.9e6, friction_w=45e3, motor_loads=(0.5, 1.0), motor_efficiencies=(0.955, 0.96)
@@ -56,3 +57,18 @@ def test_an_induction_motor_slips_with_its_load() -> None:
     # source: the invented plant: 740 to 746 rpm in service
     rpm = slipping_speed(motor, np.array([0.45e6, 1.0e6])) * 30 / np.pi
     assert 740 < rpm[1] < rpm[0] < 746.5
+
+
+@pytest.mark.parametrize("name", ["K-110", "K-220", "K-330"])
+def test_one_factor_serves_the_invented_drivers_over_their_range(name: str) -> None:
+    """Learned near full load, with the usual efficiencies and no friction entered: used down to half load."""
+    real = EQUIPMENT[name].driver
+    driver = DriverCurve(rated_power_w=real.rated_power_w)
+    full = 0.82 * real.rated_power_w * real.mechanical_efficiency
+    factor = learned_factor(driver, np.array([full]), np.array([real.electrical_power(full)]))
+    assert 0.95 < factor < 1.05
+    learned = replace(driver, factor=factor)
+    for share in (0.5, 0.7, 0.9, 1.0, 1.1):
+        plant = real.electrical_power(share * full)
+        assert float(electrical_power(learned, share * full)) == pytest.approx(plant, rel=0.02)
+        assert float(indicated_power(learned, plant)) == pytest.approx(share * full, rel=0.02)
