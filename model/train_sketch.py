@@ -207,7 +207,7 @@ def _newton_step(slope: Array, residual: Array) -> Array:
     longest = np.full(residual.shape[1], LONGEST_STEP)
     longest[-1] = _LONGEST_TEMPERATURE_STEP
     cut = np.minimum(1.0, longest / np.maximum(np.abs(step), 1e-300)).min(axis=1)
-    return step * cut[:, None]
+    return np.asarray(step * cut[:, None])
 
 
 def _solved(matrix: Array, right: Array) -> Array:

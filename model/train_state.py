@@ -81,7 +81,7 @@ class TrainSolution:
     @property
     def unit_power_w(self) -> Array:
         """Indicated power of the machine. [W]"""
-        return self.power_w.sum(axis=1)
+        return np.asarray(self.power_w.sum(axis=1))
 
     def require(self) -> "TrainSolution":
         """The solution, if every frame has one.
