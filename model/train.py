@@ -4,6 +4,7 @@ Beside the local view, in which each stage is judged at its own measured pressur
 what all of them should be for the headers, the cooling water, the load step and the recycles there are.
 """
 
+from collections.abc import Callable
 from dataclasses import dataclass, fields
 from typing import Final
 
@@ -28,6 +29,7 @@ __all__ = ["Lines", "TrainBoundary", "TrainSolution", "solve_train"]
 
 Array = NDArray[np.float64]
 Mask = NDArray[np.bool_]
+Steps = NDArray[np.intp]
 
 CHUNK: Final = 100
 """Frames solved at once; more fall out of the processor's cache."""
@@ -37,7 +39,7 @@ MOST_ITERATIONS: Final = 14
 def solve_train(
     unit: Unit,
     gas: GasSurface,
-    corrections: Corrections,
+    corrections: Corrections | Callable[[int], Corrections],
     boundary: TrainBoundary,
     *,
     lines: Lines | None = None,
@@ -53,8 +55,9 @@ def solve_train(
         The nameplate.
     gas : GasSurface
         Its gas, dry.
-    corrections : Corrections
-        How its cylinders depart from the ideal cycle.
+    corrections : Corrections or callable
+        How its cylinders depart from the ideal cycle; a callable gives those of a load step's index, as
+        `model.calibration.Calibration.corrections_of` does.
     boundary : TrainBoundary
         Headers, cooling, load step and recycles. [SI]
     lines : Lines or None
@@ -92,18 +95,32 @@ def solve_train(
     Conservation of moles and enthalpy; see `model.train_streams`, `model.stage`, `model.cooler`,
     `model.wet`.
     """
-    case = _Case(
-        unit=unit, gas=gas, corrections=corrections, lines=lines or lines_of(unit), tolerance=tolerance,
-        angles=angles,
-    )  # fmt: skip
     whole, codes = _rows(unit, gas, boundary)
     usable = np.flatnonzero(codes == Verdict.GOOD)
     pieces = []
-    for at in range(0, max(usable.size, 1), CHUNK):
-        rows = usable[at : at + CHUNK]
-        begin = None if start is None else (start.unknowns[rows], rows_of(start.sketch, rows))
-        pieces.append((rows, _solve(case, rows_of(whole, rows), begin)))
+    for found, members in _by_corrections(corrections, whole.load_step, usable):
+        case = _Case(
+            unit=unit, gas=gas, corrections=found, lines=lines or lines_of(unit), tolerance=tolerance,
+            angles=angles,
+        )  # fmt: skip
+        for at in range(0, max(members.size, 1), CHUNK):
+            rows = members[at : at + CHUNK]
+            begin = None if start is None else (start.unknowns[rows], rows_of(start.sketch, rows))
+            pieces.append((rows, _solve(case, rows_of(whole, rows), begin)))
     return _solution(whole, codes, joined(codes.size, pieces), tolerance)
+
+
+def _by_corrections(
+    corrections: Corrections | Callable[[int], Corrections], load_step: Steps, usable: Steps
+) -> list[tuple[Corrections, Steps]]:
+    """Rows of each set of corrections; one set at least."""
+    if isinstance(corrections, Corrections):
+        return [(corrections, usable)]
+    steps = load_step[usable]
+    groups: dict[Corrections, list[Steps]] = {}
+    for step in np.unique(steps) if usable.size else [0]:
+        groups.setdefault(corrections(int(step)), []).append(usable[steps == step])
+    return [(found, np.concatenate(members)) for found, members in groups.items()]
 
 
 @dataclass(frozen=True, slots=True, eq=False, kw_only=True)
