@@ -10,7 +10,7 @@ import math
 from collections.abc import Mapping, Sequence
 from pathlib import Path
 from types import TracebackType
-from typing import TYPE_CHECKING, Final, Self
+from typing import Any, Final, Self
 
 import numpy as np
 
@@ -18,8 +18,6 @@ from agent.siteplan.plan import Input, UnitPlan
 from simulator.gas_data import Floats
 from simulator.instruments import RESOLUTION
 
-if TYPE_CHECKING:
-    import pyarrow as pa
 
 QUALITY: Final = ".quality"
 TRUTH: Final = "truth"
@@ -90,7 +88,7 @@ class UnitFiles:
     ) -> None:
         """The next minutes; values by tag, NaN where the sender gives none."""
         pa = self._pa
-        columns: list[pa.Array] = [_times(pa, time)]
+        columns: list[Any] = [_times(pa, time)]
         for tag in self._plan.inputs:
             columns.append(_values(pa, tag, shown[tag.tag]))
             columns.append(pa.array(quality[tag.tag], type=pa.uint8()))
@@ -104,8 +102,8 @@ class UnitFiles:
         pa = self._pa
         arrays = {"time": _times(pa, time)}
         for name, row in values.items():
-            whole = isinstance(row, np.ndarray)
-            arrays[name] = pa.array(row, type=_kind_of(pa, row) if whole else pa.string())
+            kind = _kind_of(pa, row) if isinstance(row, np.ndarray) else pa.string()
+            arrays[name] = pa.array(row, type=kind)
         table = pa.table(arrays).replace_schema_metadata(self._about)
         if self._truth is None:
             path = self._folder / TRUTH / f"{self._plan.id}.parquet"
@@ -156,22 +154,22 @@ def write_about(folder: Path, about: Mapping[str, object], truth: Mapping[str, o
         path.write_text(json.dumps({"throwline": _MARK, **content}, indent=1) + "\n", encoding="utf-8")
 
 
-def _times(pa: object, time: Floats) -> "pa.Array":  # type: ignore[name-defined]
+def _times(pa: Any, time: Floats) -> Any:
     seconds = np.round(time).astype(np.int64)
-    return pa.array(seconds, type=pa.timestamp("s", tz="UTC"))  # type: ignore[attr-defined]
+    return pa.array(seconds, type=pa.timestamp("s", tz="UTC"))
 
 
-def _values(pa: object, tag: Input, row: Sequence[object] | Floats) -> "pa.Array":  # type: ignore[name-defined]
+def _values(pa: Any, tag: Input, row: Sequence[object] | Floats) -> Any:
     if tag.quantity == "load_step":
-        return pa.array(row, type=pa.string())  # type: ignore[attr-defined]
+        return pa.array(row, type=pa.string())
     values = np.asarray(row, dtype=float)
     none = ~np.isfinite(values)
     if tag.quantity == "run_signal":
-        return pa.array(values > 0.5, type=pa.bool_(), mask=none)  # type: ignore[attr-defined]
-    return pa.array(values, type=pa.float64(), mask=none)  # type: ignore[attr-defined]
+        return pa.array(values > 0.5, type=pa.bool_(), mask=none)
+    return pa.array(values, type=pa.float64(), mask=none)
 
 
-def _kind_of(pa: object, row: Floats) -> object:
+def _kind_of(pa: Any, row: Floats) -> Any:
     if row.dtype == np.bool_:
-        return pa.bool_()  # type: ignore[attr-defined]
-    return pa.float32()  # type: ignore[attr-defined]
+        return pa.bool_()
+    return pa.float32()

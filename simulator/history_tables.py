@@ -32,7 +32,9 @@ class Piece:
         boundary = {name: v[chosen] for name, v in minutes.values.items()}
         if minutes.composition is not None:
             boundary |= gas_shares(self.table.domain, minutes.names, minutes.composition[chosen])
-        return self.table.values(boundary, minutes.sizes[np.ix_(chosen, list(self.members))])
+        return self.table.values(
+            boundary, minutes.sizes[np.ix_(chosen, np.array(self.members, dtype=np.intp))]
+        )
 
 
 def codes(minutes: Minutes) -> npt.NDArray[np.int64]:
