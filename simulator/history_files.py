@@ -18,7 +18,6 @@ from agent.siteplan.plan import Input, UnitPlan
 from simulator.gas_data import Floats
 from simulator.instruments import RESOLUTION
 
-
 QUALITY: Final = ".quality"
 TRUTH: Final = "truth"
 _MARK: Final = "SIMULATED: an invented plant; no value here was measured"
@@ -110,7 +109,7 @@ class UnitFiles:
             self._truth = self._pq.ParquetWriter(path, table.schema, compression="zstd")
         self._truth.write_table(table)
 
-    def _tag_schema(self) -> "pa.Schema":
+    def _tag_schema(self) -> Any:
         pa = self._pa
         found = [pa.field("time", pa.timestamp("s", tz="UTC"), nullable=False)]
         for tag in self._plan.inputs:
@@ -121,7 +120,7 @@ class UnitFiles:
         found.append(pa.field("simulated", pa.bool_(), nullable=False))
         return pa.schema(found, metadata=self._about)
 
-    def _decimals(self, schema: "pa.Schema") -> "pa.Schema":
+    def _decimals(self, schema: Any) -> Any:
         """The same with as many digits as each sender shows."""
         pa = self._pa
         units = {tag.tag: tag.unit for tag in self._plan.inputs}
