@@ -258,9 +258,3 @@ def in_a_process(*, stubbed: bool, units: list[str]) -> str:
 def test_the_history_needs_no_expected_value_code() -> None:
     """Tables are made and minutes told with every such module of the model replaced by a stub that raises."""
     assert in_a_process(stubbed=True, units=["K-110"]) == in_a_process(stubbed=False, units=["K-110"])
-
-
-@pytest.mark.slow
-@pytest.mark.timeout(600)
-def test_no_unit_of_the_history_needs_expected_value_code() -> None:
-    assert in_a_process(stubbed=True, units=[]) == in_a_process(stubbed=False, units=[])
