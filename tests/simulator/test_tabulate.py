@@ -195,7 +195,7 @@ def test_reversal_of_rows_is_that_of_each(load: Callable[[np.ndarray], np.ndarra
 @pytest.mark.slow
 @pytest.mark.timeout(900)
 def test_tables_meet_their_bars(tmp_path: Path) -> None:
-    """Random points off the nodes, full load, two faults; the bench `tabulation` does all units, many more."""
+    """Random points off the nodes, full load, two faults; the bench `tabulation` does all units."""
     unit = "K-110"
     assert CASES[unit][0][0] == "100"
     rows = compare(UNITS[unit], 0, 40, seed=2000, folder=tmp_path, kept=None)
