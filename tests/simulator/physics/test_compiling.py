@@ -51,9 +51,11 @@ def test_machine_code_goes_to_the_folder_named_and_is_used_again(tmp_path: Path)
     before = sorted(site.rglob("*"))
     code = (
         "import time\nbegan = time.process_time()\n"
-        "from simulator.machine import Machine\nfrom simulator.ostmere import EQUIPMENT, USUAL\n"
+        "import simulator\nfrom simulator.machine import Machine\n"
+        "from simulator.ostmere import EQUIPMENT, USUAL\n"
         "from agent.siteplan.load import load_site\nfrom pathlib import Path\n"
-        "unit = load_site(Path('site/simulator/sites/ostmere.yaml')).unit('K-330').unit\n"
+        "site = Path(simulator.__file__).parent / 'sites' / 'ostmere.yaml'\n"
+        "unit = load_site(site).unit('K-330').unit\n"
         "loaded = time.process_time()\n"
         "Machine(unit, EQUIPMENT['K-330'], USUAL['K-330'], 1).run(1)\n"
         "print(loaded - began, time.process_time() - loaded)\n"
