@@ -37,6 +37,7 @@ class Run:
     began_s: float
     ended_s: float
     pace: float = 1.0
+    least_s: float = 0.0  # how long silence must have been kept before it counts
 
     def onset_s(self, expected: Expected) -> float:
         return self.began_s + expected.real_s(self.pace)
@@ -105,6 +106,8 @@ def score(truth: Truth, events: Sequence[AlarmEvent], run: Run, *, in_reach: Col
     lines = [_judge(truth, i, matches, run, in_reach) for i in matches]
     matched = {id(e) for e in matches.values() if e is not None}
     lines += [_unasked(truth, e, run) for e in raised if id(e) not in matched]
+    if not truth.expected_first and run.ended_s - run.began_s < run.least_s:
+        lines.append(_too_short(run))
     return Score(story=truth.story, lines=tuple(lines))
 
 
@@ -170,6 +173,13 @@ def _unasked(truth: Truth, event: AlarmEvent, run: Run) -> Line:
         verdict=verdict, what=event.alarm, unit=event.unit, subject=event.subject,
         after_s=event.tick - run.began_s, allowed_s=None,
         why="before anything of it happened" if early else "",
+    )  # fmt: skip
+
+
+def _too_short(run: Run) -> Line:
+    return Line(
+        verdict=Verdict.RUN_TOO_SHORT, what="silence", unit="*", subject="",
+        after_s=run.ended_s - run.began_s, allowed_s=run.least_s, why="kept for too short a time to count",
     )  # fmt: skip
 
 

@@ -11,9 +11,12 @@ from pathlib import Path
 
 from agent.journal.sqlite import JournalReader
 from agent.siteplan.load import load_site
+from simulator.plant_main import scenario_path
+from simulator.scenario import load_scenario
 from simulator.score import Run, Score, score, table
 from simulator.truth import Need, truth_of
 
+SILENCE_S = 60.0  # alarms wait as long: less says nothing of a story that names no length
 SITE = Path(__file__).resolve().parents[1] / "simulator" / "sites" / "ostmere.yaml"
 
 
@@ -30,7 +33,9 @@ def score_journal(
         events = journal.events()
     finally:
         journal.close()
-    run = Run(began_s=began_s, ended_s=float(min(judged)), pace=pace)
+    told = load_scenario(scenario_path(story), load_site(SITE)).at_pace(pace)
+    least_s = SILENCE_S if told.length_s is None else told.length_s
+    run = Run(began_s=began_s, ended_s=float(min(judged)), pace=pace, least_s=least_s)
     return score(truth_of(story), events, run, in_reach=in_reach), run
 
 

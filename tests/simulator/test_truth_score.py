@@ -205,3 +205,12 @@ def test_table_says_it_in_words() -> None:
     assert lines[4] == "not yet in reach stage_capacity_low K-220 stage2 4.0 d needs drift detection"
     assert lines[5] == "clean-month passed silence"
     assert lines[6:] == ["quiet FAILED", "forbidden alarm gas_load_compression K-110 cylinder2 180 s"]
+
+
+def test_silence_of_a_moment_is_no_silence() -> None:
+    run = Run(began_s=BEGAN, ended_s=BEGAN + 1.0, least_s=3600.0)
+    found = score(truth_of("clean-month"), [], run)
+    assert found.failed
+    assert [line.verdict for line in found.lines] == [Verdict.RUN_TOO_SHORT]
+    whole = score(truth_of("clean-month"), [], Run(began_s=BEGAN, ended_s=BEGAN + 3600.0, least_s=3600.0))
+    assert not whole.failed
