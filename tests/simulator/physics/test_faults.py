@@ -59,6 +59,24 @@ def test_cover_of_the_leaking_suction_valve_is_the_hot_one(settled: Callable[...
     assert all(value < 0.4 * rise[1, HEAD] for at, value in rise.items() if at != (1, HEAD))
 
 
+@pytest.mark.parametrize("side", list(Side))
+def test_the_end_of_the_leaking_discharge_valve_delivers_the_hot_gas(
+    settled: Callable[..., MachineOutcome], side: Side
+) -> None:
+    healthy, faulty = change(
+        settled, "K-110", Fault(kind=K.DISCHARGE_VALVE_LEAK, size=0.001, cylinder=1, side=side)
+    )
+    # source: Bloch and Hoefner, Reciprocating Compressors (1996), page 336: the cover of the leaking valve is
+    # hot; a discharge cover feels the gas that passes under it
+    rise = {
+        (n, s): end(faulty, n, s).delivered_temperature_k - end(healthy, n, s).delivered_temperature_k
+        for n in (1, 2)
+        for s in Side
+    }
+    assert rise[1, side] > 3.0
+    assert all(value < 0.4 * rise[1, side] for at, value in rise.items() if at != (1, side))
+
+
 def test_leaking_rings_heat_both_ends_and_no_single_one(settled: Callable[..., MachineOutcome]) -> None:
     healthy, faulty = change(settled, "K-110", Fault(kind=K.RING_LEAK, size=0.001, cylinder=1))
     # common practice: both ends warmer, no single hot cover, capacity down
