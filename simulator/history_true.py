@@ -53,7 +53,7 @@ class TrueValues:
 
     def reset(self) -> None:
         self._walls: dict[int, float] = {}
-        self._still = Standstill(self._plan.unit)
+        self._still = Standstill()
         self._runs = True
         self._last: dict[str, float] = {}
 

@@ -7,6 +7,7 @@ than the world around them.
 
 import math
 from collections.abc import Mapping, Sequence
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import replace
 from types import MappingProxyType
 from typing import Final
@@ -16,7 +17,7 @@ from simulator.course import Calm, UnitCourse, UnitOrders
 from simulator.equipment import Equipment, Surroundings
 from simulator.instrument_faults import SampleQuality
 from simulator.instruments import HeaderSwing, Instrument, rounded
-from simulator.machine import Machine
+from simulator.machine import Machine, NotSettledError
 from simulator.ostmere import EQUIPMENT, SEED, USUAL
 from simulator.outcome import MachineOutcome
 from simulator.sample import Sample
@@ -32,6 +33,7 @@ the work of 1 800. At 900 two to three openings in a hundred are held back (meas
 MOST_S: Final = 3.0
 """Of a longer pause no more than this is turned: a starved machine falls behind rather than ever later."""
 
+_FLUTTERING: Final = 20  # turns to take the mean of where there is no rest
 _SWING: Final = MappingProxyType({"suction": 0.003, "discharge": 0.0015})  # share of the pressure
 _TAP_BEFORE: Final = "suction header"  # a flow meter there sees what is drawn, elsewhere what is delivered
 
@@ -59,14 +61,13 @@ class UnitLife:
         self._plan = plan
         self._flow_is_drawn = any(i.quantity == "flow" and i.tap == _TAP_BEFORE for i in plan.inputs)
         self._flow_is_dry = plan.flow_reference is None or plan.flow_reference.dry
-        self._settled = Machine(plan.unit, equipment, usual, SEED, steps=steps)
-        self._first = self._settled.settle()
+        self._new = Machine(plan.unit, equipment, usual, SEED, steps=steps)
+        self._settled: tuple[UnitOrders, Machine, MachineOutcome] | None = None
         self.reset()
 
     def reset(self) -> None:
-        self._machine = self._settled.twin()
-        self._outcome = self._first
-        self._still = Standstill(self._plan.unit)
+        self._begun = False
+        self._still = Standstill()
         self._runs = True
         self._turn_part = 0.0
         self._orders: UnitOrders | None = None
@@ -77,8 +78,25 @@ class UnitLife:
         """Of the last second in which the unit ran."""
         return self._outcome
 
+    def begin(self, orders: UnitOrders) -> None:
+        """Be found running since long under these orders; what was settled once is kept for the next time."""
+        if self._settled is None or self._settled[0] != orders:
+            machine = self._new.twin()
+            machine.change(around=self._with_ends(orders), faults=orders.faults)
+            machine.reset()
+            try:
+                outcome = machine.settle()
+            except NotSettledError:  # plates that flutter come to no rest, yet wander no further
+                outcome = machine.hasten(_FLUTTERING)
+            self._settled = orders, machine, outcome
+        _, machine, self._outcome = self._settled
+        self._machine = machine.twin()
+        self._begun = True
+
     def advance(self, orders: UnitOrders, *, real_s: float, plant_s: float) -> Mapping[str, float]:
         """Go on by a time on the clock and in the plant; true values by series name [SI]."""
+        if not self._begun:
+            self.begin(orders)
         if not orders.running:
             if self._runs:
                 self._still.begin(self._outcome)
@@ -92,8 +110,8 @@ class UnitLife:
     def _start(self, orders: UnitOrders) -> None:
         machine = self._machine
         walls = [self._still.wall_k(float(w), orders.ambient_k) for w in machine.wall_k]
-        machine.change(around=orders.around, faults=orders.faults)
-        machine.reset()
+        machine.change(around=self._with_ends(orders), faults=orders.faults)
+        machine.reset(at_rest=True)
         machine.set_walls(walls)
         self._runs, self._orders = True, None
 
@@ -163,7 +181,7 @@ class Plant:
         self.reset()
 
     def reset(self) -> None:
-        self._first_time: float | None = None
+        self._begins: float | None = None
         self._last_time: float | None = None
         self._plant_time = 0.0
         self.behind_s = 0.0  # of the clock, since pauses were too long to make up for
@@ -184,6 +202,17 @@ class Plant:
         """One unit, for who wants to compare tags with the truth."""
         return self._lives[unit]
 
+    def begin(self, time: float) -> None:
+        """Settle every machine to the weather of an instant, UTC [s]; the first sample else does."""
+        self._begins = time
+        with ThreadPoolExecutor(len(self._site.units)) as pool:
+            begun = [
+                pool.submit(self._lives[u.id].begin, self._orders(u, self.story.units[u.id], -1.0))
+                for u in self._site.units
+            ]
+        for one in begun:
+            one.result()
+
     def sample(self, time: float, story_start: float | None) -> Sequence[Sample]:
         """Every tag at one instant; machines turn for the time since the last one.
 
@@ -199,8 +228,8 @@ class Plant:
         Sequence[Sample]
             One sample per tag of the site.
         """
-        if self._first_time is None:
-            self._first_time = time
+        if self._begins is None:
+            self.begin(time)
         real = 0.0 if self._last_time is None else max(0.0, time - self._last_time)
         self._last_time = time
         self.behind_s += max(0.0, real - MOST_S)
@@ -221,7 +250,7 @@ class Plant:
         return [replace(s, time=time) for s in samples]
 
     def _orders(self, unit: UnitPlan, course: UnitCourse, elapsed: float) -> UnitOrders:
-        now = (self._first_time or 0.0) + self._plant_time
+        now = (self._begins or 0.0) + self._plant_time
         around = replace(USUAL[unit.id], cooling_water_k=self._weather.cooling_water_k(now))
         if around.composition is None and course.gas:
             around = replace(around, composition=unit.unit.composition)

@@ -6,6 +6,7 @@ import json
 import logging
 import math
 import sys
+import time
 from collections.abc import Mapping, Sequence
 from importlib.resources import files
 from pathlib import Path
@@ -48,6 +49,7 @@ def run(
         plan = load_site(site, addresses=dict(addresses or {}))
         told = load_scenario(scenario_path(scenario), plan)
         plant = Plant(plan, told, pace=pace, seed=seed)
+        plant.begin(time.time())
 
         def began(at: float) -> None:
             _say("plant up")
@@ -88,7 +90,13 @@ def main(argv: Sequence[str] | None = None) -> int:
     parser.add_argument("--site", type=Path, required=True)
     parser.add_argument("--scenario", default="first-light", help="name of a shipped scenario, or a file")
     parser.add_argument("--address", type=_address, action="append", default=[], metavar="SOURCE=URL")
-    parser.add_argument("--pace", type=float, default=1.0, help="hurry the story by this factor")
+    parser.add_argument(
+        "--pace",
+        type=float,
+        default=1.0,
+        help="hurry story, weather and metal by this factor; cranks turn at their true rate, so that bottles "
+        "settle that much slower beside them",
+    )
     parser.add_argument("--seed", type=int, default=1, help="of the noise")
     parser.add_argument(
         "--ledger", type=Path, help="append each message that the broker confirmed, a JSON line each"

@@ -34,7 +34,7 @@ class PlantError(Exception):
 
 
 @dataclass(kw_only=True)
-class _Line:
+class Line:
     """One source: its wire, what delays it, whether it is cut."""
 
     wire: Wire
@@ -66,7 +66,7 @@ class _Line:
 class Wires:
     """The lines of a site, by source."""
 
-    lines: dict[str, _Line] = field(default_factory=dict)
+    lines: dict[str, Line] = field(default_factory=dict)
 
     @property
     def up(self) -> bool:
@@ -79,7 +79,7 @@ class Wires:
     async def open(self, site: SitePlan, ledger: Path | None, stack: AsyncExitStack) -> None:
         for source in site.sources.values():
             wire = await _open(source, site, ledger, stack)
-            self.lines[source.name] = _Line(wire=wire, delivery=Delivery(f"delivery/{source.name}"))
+            self.lines[source.name] = Line(wire=wire, delivery=Delivery(f"delivery/{source.name}"))
 
 
 async def _open(source: Source, site: SitePlan, ledger: Path | None, stack: AsyncExitStack) -> Wire:

@@ -1,33 +1,30 @@
-"""A compressor at rest: pressures settle out through the open recycle, temperatures go to those around it."""
+"""A compressor at rest: all empties into the suction header, temperatures go to those around it.
+
+At a stop the recycles open, the suction valve stays open and the non-return valve holds the discharge header
+off, so that every vessel comes to the pressure of the suction header.
+"""
 
 import math
 from typing import Final
 
-from model.machine import Unit
 from simulator.course import UnitOrders
 from simulator.outcome import MachineOutcome
 
-SETTLE_OUT_S: Final = 20.0  # pressures, through the recycle that opens at a stop
+SETTLE_OUT_S: Final = 15.0  # pressures; 2 % of the way is left after a minute
 COOL_GAS_S: Final = 1500.0  # gas in bottles and wells
 COOL_WALL_S: Final = 3600.0  # liners and heads
-_CHECK_VALVE_HOLDS: Final = 0.5  # the settle-out pressure lies at this share between suction and the mean
 
 
 class Standstill:
     """True values of the tags of a stopped unit; begins where the machine left off."""
 
-    def __init__(self, unit: Unit) -> None:
-        self._unit = unit
+    def __init__(self) -> None:
         self.reset()
 
     def reset(self) -> None:
         self._pressures: dict[str, float] = {}
         self._temperatures: dict[str, float] = {}
         self.stopped_s = 0.0
-
-    @property
-    def is_cold(self) -> bool:
-        return self.stopped_s > COOL_WALL_S
 
     def begin(self, outcome: MachineOutcome) -> None:
         """Take over from the running machine."""
@@ -55,13 +52,10 @@ class Standstill:
             By series name [SI].
         """
         self.stopped_s += step_s
-        level = sum(self._pressures.values()) / len(self._pressures)
-        suction = orders.around.suction_pressure_pa
-        rest = suction + _CHECK_VALVE_HOLDS * max(0.0, level - suction)
         near = -math.expm1(-step_s / SETTLE_OUT_S)
         cool = -math.expm1(-step_s / COOL_GAS_S)
         for name in self._pressures:
-            self._pressures[name] += (rest - self._pressures[name]) * near
+            self._pressures[name] += (orders.around.suction_pressure_pa - self._pressures[name]) * near
         for name in self._temperatures:
             self._temperatures[name] += (orders.ambient_k - self._temperatures[name]) * cool
         still = {"unit.speed": 0.0, "unit.flow": 0.0, "unit.electrical_power": 0.0, "unit.run_signal": 0.0}

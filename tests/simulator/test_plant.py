@@ -182,6 +182,23 @@ def test_hurried_plant_reaches_the_same_state_sooner(booster: Callable[..., Plan
     assert float(hurried[24]["PT-1101"] or 0) < 25.7  # hand: the ramp to 26 bar(a) ends after 60 / 3 s
 
 
+def test_plant_is_found_settled_to_the_weather_of_its_day(site: SitePlan) -> None:
+    """Neither in January nor in July does it drift from its first second on, though the water differs."""
+    alone = replace(site, units=(site.unit("K-330"),))
+    quiet = load_scenario(scenario_path("quiet"), site)
+    built = Plant(alone, quiet, pace=1.0, seed=1, steps=COARSE)
+    last_stage = []
+    for start in (1_799_500_000.4, 1_815_300_000.4):
+        built.reset()
+        found = []
+        for k in range(13):
+            built.sample(start + k, None)
+            found.append(built.life("K-330").outcome.stages[1].discharge_temperature_k)
+        assert max(found) - min(found) < 0.5  # headers breathe
+        last_stage.append(found[0])
+    assert last_stage[1] - last_stage[0] > 8.0
+
+
 STOP = """title: stop
 changes:
   - {at: 10 min, unit: K-110, variable: running, to: false}
@@ -195,7 +212,12 @@ def test_stopped_machine_settles_out_cools_and_starts_again(
     story = tmp_path / "stop.yaml"
     story.write_text(STOP, encoding="utf-8")
     built = booster(story, pace=60.0)  # a second stands for a minute
-    rows = dict(told(built, 210))
+    rows, walls, highest = {}, {}, {}
+    for k, row in told(built, 210):
+        outcome = built.life("K-110").outcome
+        rows[k] = row
+        walls[k] = outcome.cylinders[0].ends[0].wall_temperature_k
+        highest[k] = outcome.stages[0].discharge_pressure_pa
     assert (rows[9]["XS-1101"], rows[11]["XS-1101"]) == (True, False)
     assert float(rows[12]["ST-1101"] or 0) < 1.0
     assert float(rows[12]["FT-1101"] or 0) < 20.0
@@ -203,6 +225,9 @@ def test_stopped_machine_settles_out_cools_and_starts_again(
     assert float(rows[30]["TT-1102"] or 0) > 40.0  # not cold after twenty minutes
     assert float(rows[178]["TT-1102"] or 0) < 20.0  # hand: 290 K around it; gone after some hours
     assert rows[181]["XS-1101"] is True
+    assert walls[181] < walls[209] - 30.0  # found cold, warm again after half an hour
+    # hand: from the suction header's 30 bar(a), not from where it stopped; a few seconds to the full 70
+    assert highest[180] < 68e5 < highest[185]
     assert float(rows[205]["PT-1102"] or 0) > 68.0
     assert float(rows[209]["TT-1102"] or 0) > 80.0
 
