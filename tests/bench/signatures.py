@@ -3,10 +3,11 @@
 The table was made with an earlier prototype of the same equations (unit K-220, dry gas, a machine as on its
 nameplate), so this is verification, not validation. Nothing in the plant is set to meet it.
 
-An entry is seen where it exceeds three times the repeatability: then sign and size (within 30 %) must agree.
-Any other must lie within one and a half times the repeatability of its entry. Repeatability is the spread of
-repeated settled windows, and never less than one unit of the table's last digit. Half a unit of that digit is
-allowed beside the 30 %, since the table is rounded.
+An entry is seen where the table's figure exceeds three times the repeatability: then sign and size (within
+30 %) must agree. Where it does not, the plant's must lie below one and a half times the repeatability.
+Repeatability is the spread of repeated settled windows. The table is rounded, so half a unit of its last
+digit is allowed beside either bound. Since the settled plant repeats far better than that digit, nearly every
+entry that is not zero is seen; those above three units of the digit are counted apart.
 """
 
 import argparse
@@ -17,6 +18,7 @@ from dataclasses import dataclass, replace
 from importlib.resources import files
 from pathlib import Path
 from typing import Final
+from unittest.mock import patch
 
 os.environ.setdefault("NUMBA_CACHE_DIR", str(Path(__file__).parents[2] / ".pytest_cache" / "plant"))
 
@@ -75,15 +77,16 @@ FEWER: Final = (  # what a test looks at
     "cooler 1 fouled", "pocket open, throw 1",
 )  # fmt: skip
 WHY: Final = (
-    "Why entries miss; the plant is not set to the table:",
+    "Why the others miss; the plant is not set to the table:",
     "",
-    "- Ts2, Ts3 where the flow falls: the plant's coolers do better at part flow (transfer units go with",
-    "  flow to the minus 0.4), those of the table have a fixed effectiveness. 5 % less flow makes 0.3 K.",
-    "- Ts2, Ts3 with a suction valve that leaks in the only cylinder of its stage: 0.65 K come through the",
-    "  cooler, as in the table; the rest is hot gas thrown back into the bottle, where the plant's tag is.",
-    "- First recycle: Td3 follows the second ratio; the table's pressures of that row are whole per cents.",
-    "- Final recycle: the plant's is drawn off behind the last cooler and line, as warm as the header, and",
-    "  so changes nothing inside. Where the table's was drawn off is not written down.",
+    "- Suction temperature of a stage whose only cylinder has a suction valve that leaks: 0.65 K come through",
+    "  the cooler, as in the table; the rest is hot gas thrown back into the bottle, where the plant's tag is.",
+    "- Final recycle: the plant's is drawn off behind the last cooler and line. It comes 1.4 K warmer than the",
+    "  header, which takes back the capacity that the smaller inlet drop gives (suction bottle +0.16 %,",
+    "  +0.31 K), and the last line still carries all the gas, so that its stage sees no other pressure. The",
+    "  table's fits a recycle drawn off before that line; where it was is not written down.",
+    "- The rest differ by a hundredth or two more than the table's rounding allows, or are a small sum of two",
+    "  larger changes of opposite sign (first recycle, Td3: second ratio up, second suction colder).",
     "",
     "One loss a throw for rings (expected-value code) and the thicker rod of K-110 do not touch this table.",
 )
@@ -187,25 +190,28 @@ class Entry:
     repeatability: float
 
     @property
-    def floor(self) -> float:
-        return max(self.repeatability, self.last_digit)
+    def seen(self) -> bool:
+        return abs(self.published) > SEEN * self.repeatability
 
     @property
-    def seen(self) -> bool:
-        return abs(self.published) > SEEN * self.floor
+    def large(self) -> bool:
+        """Whether the table's rounding is small beside the entry."""
+        return abs(self.published) > SEEN * self.last_digit
+
+    @property
+    def counts(self) -> bool:
+        return (self.row, self.column) not in CHOSEN
 
     @property
     def met(self) -> bool:
         """Whether the entry is met; True of one that only sizes its row."""
-        if (self.row, self.column) in CHOSEN:
+        if not self.counts:
             return True
+        rounding = 0.5 * self.last_digit
+        if not self.seen:
+            return abs(self.found) <= QUIET * self.repeatability + rounding
         off = abs(self.found - self.published)
-        if self.seen:
-            return (
-                self.found * self.published > 0.0
-                and off <= SIZE * abs(self.published) + 0.5 * self.last_digit
-            )
-        return off <= QUIET * self.floor
+        return self.found * self.published > 0.0 and off <= SIZE * abs(self.published) + rounding
 
 
 def entries(row: str, found: Array, repeatability: Array) -> list[Entry]:
@@ -222,76 +228,102 @@ def entries(row: str, found: Array, repeatability: Array) -> list[Entry]:
     return got
 
 
-def measure(names: Sequence[str], number: int) -> list[Entry]:
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Measured:
+    entries: tuple[Entry, ...]
+    faults: Mapping[str, Fault]
+
+
+def measure(names: Sequence[str], number: int, known: Mapping[str, Fault] | None = None) -> Measured:
     """Run the faults named; repeatability is that of the difference of two windows, pooled over all runs."""
     healthy = new_machine()
     rows = {"": windows(healthy, 2 * number)}
-    known = faults()
+    used = dict(faults() if known is None else known)
     for name in names:
-        if name in known:
-            rows[name] = with_fault(healthy, known[name], number)
+        if name in used:
+            rows[name] = with_fault(healthy, used[name], number)
         elif name == "first recycle passing":
-            _, rows[name] = sized(healthy, K.FIRST_RECYCLE_PASSING, 0.15, number)
+            used[name], rows[name] = sized(healthy, K.FIRST_RECYCLE_PASSING, 0.15, number)
         else:
-            _, rows[name] = sized(healthy, K.FINAL_RECYCLE_PASSING, 0.23, number)
+            used[name], rows[name] = sized(healthy, K.FINAL_RECYCLE_PASSING, 0.23, number)
     pooled = np.sqrt(2.0 * np.mean([spread(r) ** 2 for r in rows.values()], axis=0))
     before = rows[""].mean(axis=0)
-    return [e for name in names for e in entries(name, changes(rows[name].mean(axis=0), before), pooled)]
+    found = [e for name in names for e in entries(name, changes(rows[name].mean(axis=0), before), pooled)]
+    return Measured(entries=tuple(found), faults=used)
+
+
+def with_plain_coolers(got: Measured) -> list[Entry]:
+    """What was missed anew, with coolers whose effectiveness does not follow the flow."""
+    again = {(e.row, e.column) for e in got.entries if not e.met}
+    names = [row for row in TABLE if any(row == r for r, _ in again)]
+    with patch("simulator.machine._COOLER_POWER", 0.0):
+        plain = measure(names, 2, got.faults)
+    return [e for e in plain.entries if (e.row, e.column) in again]
 
 
 def main(argv: Sequence[str]) -> int:
     parser = argparse.ArgumentParser(prog="python -m tests.bench signatures")
     parser.add_argument("--windows", type=int, default=4, help="settled windows a fault")
-    number = parser.parse_args(argv).windows
-    found = measure(list(TABLE), number)
-    missed = [e for e in found if not e.met]
-    seen = [e for e in found if e.seen and (e.row, e.column) not in CHOSEN]
-    others = [e for e in found if not e.seen and (e.row, e.column) not in CHOSEN]
+    got = measure(list(TABLE), parser.parse_args(argv).windows)
+    plain = with_plain_coolers(got)
+    found = got.entries
+    seen = [e for e in found if e.seen and e.counts]
+    others = [e for e in found if not e.seen and e.counts]
+    large = [e for e in seen if e.large]
     figures: dict[str, object] = {
         "what": f"verification: tag changes of {UNIT} from healthy, beside an earlier prototype's table",
-        "repeatability": {e.column: round(e.repeatability, 3) for e in found[: len(COLUMNS)]},
-        "entries seen": len(seen),
-        "entries seen and met": sum(e.met for e in seen),
-        "other entries": len(others),
-        "other entries met": sum(e.met for e in others),
-        "other entries themselves below 1.5 repeatabilities": sum(
-            abs(e.found) <= QUIET * e.floor for e in others
-        ),
-        "missed": [
-            {
-                "fault": e.row, "tag": e.column, "table": e.published, "plant": round(e.found, 2),
-                "seen": e.seen,
-            }
-            for e in missed
-        ],
-        "rows": {row: {e.column: round(e.found, 2) for e in found if e.row == row} for row in TABLE},
-    }  # fmt: skip
+        "repeatability": {e.column: round(e.repeatability, 4) for e in found[: len(COLUMNS)]},
+        "sizes": {name: round(got.faults[name].size, 5) for name in TABLE},
+        "entries above three repeatabilities": [len(seen), "met", sum(e.met for e in seen)],
+        "of these above three units of the last digit": [len(large), "met", sum(e.met for e in large)],
+        "other entries": [len(others), "met", sum(e.met for e in others)],
+        "missed": [_told(e) for e in found if not e.met],
+        "missed, with coolers of fixed effectiveness": [{**_told(e), "met": e.met} for e in plain],
+        "rows": {row: {e.column: round(e.found, 3) for e in found if e.row == row} for row in TABLE},
+    }
     write_result("signatures", figures, seeds=[])
-    text = "\n".join(_page(found, figures)) + "\n"
+    text = "\n".join(_page(found, plain)) + "\n"
     (RESULTS / "signatures.md").write_text(text, encoding="utf-8")
     print(text)
     return 0
 
 
-def _page(found: Sequence[Entry], figures: Mapping[str, object]) -> list[str]:
+def _told(e: Entry) -> dict[str, object]:
+    return {"fault": e.row, "tag": e.column, "table": e.published, "plant": round(e.found, 3)}
+
+
+def _page(found: Sequence[Entry], plain: Sequence[Entry]) -> list[str]:
+    seen = [e for e in found if e.seen and e.counts]
+    others = [e for e in found if not e.seen and e.counts]
+    large = [e for e in seen if e.large]
     lines = [
         f"# Fault signatures of {UNIT}: plant / table", "",
         "Verification, not validation: the table is that of an earlier prototype of the same equations by",
-        "another hand. Change from healthy; bold: missed.", "",
-        f"- {figures['entries seen and met']} of {figures['entries seen']} entries above three",
-        "  repeatabilities are met in sign and within 30 %.",
-        f"- {figures['other entries met']} of {figures['other entries']} others lie within 1.5 of their",
-        f"  entry; {figures['other entries themselves below 1.5 repeatabilities']} are themselves below 1.5.",
-        "- The windows repeat better than the table is rounded, so one unit of its last digit stands for the",
-        "  repeatability.",
+        "another hand. Change from healthy; bold: missed. Half a unit of the last digit is allowed.", "",
+        f"- {_of(seen)} entries above three repeatabilities are met in sign and within 30 %;",
+        f"- of these, {_of(large)} that also exceed three units of the table's last digit;",
+        f"- {_of(others)} others lie below 1.5 repeatabilities.",
         "- The flow of the final recycle sizes its row and counts nowhere.",
         "", "| fault | " + " | ".join(COLUMNS) + " |", "|---" * (len(COLUMNS) + 1) + "|",
     ]  # fmt: skip
     for row in TABLE:
         cells = []
         for e in (e for e in found if e.row == row):
-            cell = f"{e.found:+.1f} / {e.published:+.1f}"
+            cell = f"{e.found:+.2f} / {e.published:+.2f}"
             cells.append(cell if e.met else f"**{cell}**")
         lines.append(f"| {row} | " + " | ".join(cells) + " |")
-    spreads = (f"{e.repeatability:.3f}" for e in found[: len(COLUMNS)])
-    return [*lines, "| repeatability | " + " | ".join(spreads) + " |", "", *WHY]
+    spreads = (f"{e.repeatability:.4f}" for e in found[: len(COLUMNS)])
+    lines.append("| repeatability | " + " | ".join(spreads) + " |")
+    lines += [
+        "", f"{_of(plain)} missed entries are met with coolers whose effectiveness does not follow the flow, as",
+        "the table's coolers do not (the plant's transfer units go with flow to the minus 0.4):", "",
+        "| fault | tag | plant, plain coolers / table |", "|---|---|---|",
+    ]  # fmt: skip
+    for e in plain:
+        cell = f"{e.found:+.2f} / {e.published:+.2f}"
+        lines.append(f"| {e.row} | {e.column} | {cell if e.met else f'**{cell}**'} |")
+    return [*lines, "", *WHY]
+
+
+def _of(counted: Sequence[Entry]) -> str:
+    return f"{sum(e.met for e in counted)} of {len(counted)}"

@@ -56,14 +56,16 @@ def test_model_meets_the_plant_on_a_healthy_cylinder(
 
 @pytest.mark.slow
 def test_signatures_meet_the_table() -> None:
-    found = signatures.measure(signatures.FEWER, 3)
-    seen = [e for e in found if e.seen]
-    assert len(seen) >= 40
-    for e in seen:
+    found = signatures.measure(signatures.FEWER, 3).entries
+    assert sum(e.seen for e in found) >= 50
+    large = [e for e in found if e.seen and e.large]
+    assert len(large) >= 40
+    for e in large:
         assert e.met, (e.row, e.column, e.found, e.published)
-    # of the small ones some miss for reasons that the bench's result tells
-    others = [e for e in found if not e.seen]
-    assert sum(e.met for e in others) >= 0.7 * len(others)
+    # of the small ones some miss for reasons that the bench's result tells; no others may
+    result: Any = json.loads((RESULTS / "signatures.json").read_text(encoding="utf-8"))
+    known = {(m["fault"], m["tag"]) for m in result["missed"]}
+    assert {(e.row, e.column) for e in found if not e.met} <= known
 
 
 def test_an_entry_that_is_off_is_told() -> None:
@@ -75,7 +77,8 @@ def test_an_entry_that_is_off_is_told() -> None:
     assert entry(1.0, 1.34).met  # 30 % and half a digit
     assert not entry(1.0, 1.36).met
     assert not entry(1.0, -1.0).met
-    assert entry(0.3, 0.44).met  # hand: not above 3 x 0.1, so 1.5 x 0.1 decides
-    assert not entry(0.3, 0.46).met
-    assert entry(1.0, 0.5, 0.4).met  # the same with windows that spread
-    assert not entry(1.0, 0.3, 0.4).met
+    assert not entry(0.3, -0.01).met  # the sign counts however small it is
+    assert entry(0.0, 0.04).met  # hand: half a digit, the plant repeats exactly
+    assert not entry(0.0, 0.06).met
+    assert entry(1.0, -0.6, 0.4).met  # not above 3 x 0.4, so 1.5 x 0.4 and half a digit decide
+    assert not entry(1.0, 0.66, 0.4).met
