@@ -6,7 +6,6 @@ import json
 import logging
 import math
 import sys
-import time
 from collections.abc import Mapping, Sequence
 from importlib.resources import files
 from pathlib import Path
@@ -49,7 +48,6 @@ def run(
         plan = load_site(site, addresses=dict(addresses or {}))
         told = load_scenario(scenario_path(scenario), plan)
         plant = Plant(plan, told, pace=pace, seed=seed)
-        plant.begin(time.time())
 
         def began(at: float) -> None:
             _say("plant up")

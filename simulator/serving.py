@@ -112,6 +112,7 @@ async def serve(
     async with AsyncExitStack() as stack:
         wires = Wires()
         await wires.open(site, ledger, stack)
+        await asyncio.to_thread(plant.begin, time.time())  # while the wires come up
         story_start: float | None = None
         begun = time.monotonic()
         due = _next_due(time.time())

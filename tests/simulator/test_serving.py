@@ -1,6 +1,7 @@
 """What stands on the wires is what the plant says, with its time, and nobody can write to it."""
 
 import asyncio
+import functools
 import json
 import time
 from collections.abc import Coroutine, Iterator
@@ -48,14 +49,20 @@ def site(mqtt: int = 1, opcua: int = 1) -> SitePlan:
     )
 
 
-def samples(plan: SitePlan, source: str, at: float = NOW) -> list[Sample]:
-    plant = Plant(plan, load_scenario(scenario_path("quiet"), plan), pace=1.0, seed=1, steps=720)
-    return [s for s in plant.sample(at, None) if s.tag.source == source]
+@functools.cache
+def plant() -> Plant:
+    """One for all: to settle it takes seconds."""
+    plan = site()
+    return Plant(plan, load_scenario(scenario_path("quiet"), plan), pace=1.0, seed=1, steps=720)
+
+
+def samples(source: str, at: float = NOW) -> list[Sample]:
+    return [s for s in plant().sample(at, None) if s.tag.source == source]
 
 
 def test_every_message_on_the_field_bus_is_the_plants_sample(broker: Broker) -> None:
     plan = site(mqtt=broker.port)
-    sent = samples(plan, "field-bus")
+    sent = samples("field-bus")
     reader = Subscriber(broker.port, "ostmere/#")
     wire = MqttWire(plan.sources["field-bus"].address, tags=len(sent))
     wire.open()
@@ -85,12 +92,12 @@ def test_ledger_holds_what_the_broker_confirmed_and_nothing_else(broker: Broker,
     wire.open()
     try:
         until(lambda: wire.up)
-        first = samples(plan, "field-bus")
+        first = samples("field-bus")
         wire.publish(first)
         until(lambda: wire.note_confirmed() or len(ledger.read_text().splitlines()) == len(first))
         broker.stop()
         until(lambda: not wire.up)
-        second = samples(plan, "field-bus", NOW + 1)
+        second = samples("field-bus", NOW + 1)
         wire.publish(second)
         wire.note_confirmed()
         assert len(ledger.read_text().splitlines()) == len(first)  # nobody confirmed the second lot
@@ -109,7 +116,7 @@ def test_field_bus_without_a_broker_refuses_what_it_cannot_keep() -> None:
     plan = site(mqtt=free_port())
     wire = MqttWire(plan.sources["field-bus"].address, tags=9)
     wire.open()
-    lot = samples(plan, "field-bus")
+    lot = samples("field-bus")
     for _ in range(605):
         wire.publish(lot)
     begun = time.monotonic()
@@ -119,7 +126,7 @@ def test_field_bus_without_a_broker_refuses_what_it_cannot_keep() -> None:
 
 
 def test_payload_keeps_milliseconds_and_says_utc() -> None:
-    sample = samples(site(), "field-bus")[0]
+    sample = samples("field-bus")[0]
     assert json.loads(payload(sample))["time"] == "2027-01-15T08:00:00.400Z"  # hand: 1.8e9 s after 1970
 
 
@@ -128,7 +135,7 @@ class Served:
 
     def __init__(self) -> None:
         self.plan = site(opcua=free_port())
-        self.sent = samples(self.plan, "control-system")
+        self.sent = samples("control-system")
         self._runner = asyncio.Runner()
         self._stack = AsyncExitStack()
 
