@@ -79,14 +79,15 @@ FEWER: Final = (  # what a test looks at
 WHY: Final = (
     "Why the others miss; the plant is not set to the table:",
     "",
-    "- Suction temperature of a stage whose only cylinder has a suction valve that leaks: 0.65 K come through",
-    "  the cooler, as in the table; the rest is hot gas thrown back into the bottle, where the plant's tag is.",
-    "- Final recycle: the plant's is drawn off behind the last cooler and line. It comes 1.4 K warmer than the",
-    "  header, which takes back the capacity that the smaller inlet drop gives (suction bottle +0.16 %,",
-    "  +0.31 K), and the last line still carries all the gas, so that its stage sees no other pressure. The",
-    "  table's fits a recycle drawn off before that line; where it was is not written down.",
-    "- The rest differ by a hundredth or two more than the table's rounding allows, or are a small sum of two",
-    "  larger changes of opposite sign (first recycle, Td3: second ratio up, second suction colder).",
+    "- Suction temperature of a stage whose only cylinder has a suction valve that leaks: 0.65 K come",
+    "  through the cooler, as in the table; the rest is hot gas thrown back into the bottle, where the",
+    "  plant's tag is.",
+    "- Final recycle: the plant's is drawn off behind the last cooler and line. It comes 1.4 K warmer than",
+    "  the header, which takes back the capacity that the smaller inlet drop gives (suction bottle +0.16 %,",
+    "  +0.31 K), and the last line still carries all the gas, so that its stage sees no other pressure.",
+    "  The table's fits a recycle drawn off before that line; where it was is not written down.",
+    "- The rest differ by a few hundredths more than the table's rounding allows, or are a small sum of",
+    "  two larger changes of opposite sign (first recycle, Td3: second ratio up, second suction colder).",
     "",
     "One loss a throw for rings (expected-value code) and the thicker rod of K-110 do not touch this table.",
 )
@@ -315,8 +316,8 @@ def _page(found: Sequence[Entry], plain: Sequence[Entry]) -> list[str]:
     spreads = (f"{e.repeatability:.4f}" for e in found[: len(COLUMNS)])
     lines.append("| repeatability | " + " | ".join(spreads) + " |")
     lines += [
-        "", f"{_of(plain)} missed entries are met with coolers whose effectiveness does not follow the flow, as",
-        "the table's coolers do not (the plant's transfer units go with flow to the minus 0.4):", "",
+        "", f"{_of(plain)} missed entries are met with coolers whose effectiveness does not follow the flow,",
+        "as the table's coolers do not (the plant's transfer units go with flow to the minus 0.4):", "",
         "| fault | tag | plant, plain coolers / table |", "|---|---|---|",
     ]  # fmt: skip
     for e in plain:
