@@ -16,13 +16,13 @@ def choose_code_cache() -> None:
     """
     if VARIABLE in os.environ:
         return
-    folder = _caches() / "throwline" / "plant-code"
     try:
+        folder = _caches() / "throwline" / "plant-code"
         folder.mkdir(parents=True, exist_ok=True)
         probe = folder / f".probe-{os.getpid()}"
         probe.touch()
         probe.unlink()
-    except OSError:
+    except (OSError, RuntimeError):  # cannot be written, or there is no home
         return
     os.environ[VARIABLE] = str(folder)
 

@@ -310,6 +310,27 @@ def _check(site: SitePlan) -> None:
         for tag in unit.inputs:
             if tag.quantity not in measured:
                 raise PlantMismatchError(f"{unit.id} {tag.tag}: the invented plant measures no {tag.name}")
+            taps = _taps(tag)
+            if taps and tag.tap not in taps:
+                raise PlantMismatchError(
+                    f"{unit.id} {tag.tag}: the invented plant measures {tag.name} at "
+                    f"{' or '.join(map(repr, taps))}, not at {tag.tap!r}"
+                )
+
+
+def _taps(tag: Input) -> tuple[str, ...]:
+    """Where this plant has an instrument for a quantity; empty: the place does not matter.
+
+    The line behind a cooler ends in the next suction bottle, at one pressure and temperature with it.
+    """
+    if tag.quantity == "flow":
+        return (_TAP_BEFORE, "discharge header")
+    if tag.quantity in {"discharge_pressure", "discharge_temperature"}:
+        return ("discharge bottle",)
+    if tag.quantity in {"suction_pressure", "suction_temperature"}:
+        number = int(tag.subject.removeprefix("stage"))
+        return ("suction bottle", f"after cooler {number - 1}") if number > 1 else ("suction bottle",)
+    return ()
 
 
 __all__ = ["LIVE_STEPS", "Plant", "PlantMismatchError", "Sample", "SampleQuality", "UnitLife"]

@@ -263,6 +263,27 @@ def test_site_with_a_machine_this_plant_lacks_is_refused(site: SitePlan) -> None
         Plant(strange, load_scenario(scenario_path("quiet"), site), pace=1.0, seed=1)
 
 
+@pytest.mark.parametrize(
+    ("tag", "tap", "said"),
+    [
+        (
+            "PT-2203",
+            "nozzle",
+            "stage2.suction_pressure at 'suction bottle' or 'after cooler 1', not at 'nozzle'",
+        ),
+        ("TT-2202", "after cooler 1", "stage1.discharge_temperature at 'discharge bottle'"),
+        ("FT-2201", "recycle line", "unit.flow at 'suction header' or 'discharge header'"),
+    ],
+)
+def test_tag_at_a_place_without_an_instrument_is_refused(
+    site: SitePlan, tag: str, tap: str, said: str
+) -> None:
+    unit = site.unit("K-220")
+    moved = replace(unit, inputs=tuple(replace(i, tap=tap) if i.tag == tag else i for i in unit.inputs))
+    with pytest.raises(PlantMismatchError, match=said):
+        Plant(replace(site, units=(moved,)), load_scenario(scenario_path("quiet"), site), pace=1.0, seed=1)
+
+
 def test_pace_of_zero_is_refused(site: SitePlan) -> None:
     with pytest.raises(ValueError, match="pace 0"):
         Plant(site, load_scenario(scenario_path("quiet"), site), pace=0.0, seed=1, steps=COARSE)
