@@ -90,11 +90,8 @@ class Machine:
         self.faults = HEALTHY
         self.reset()
 
-    def reset(self, *, at_rest: bool = False) -> None:
-        """Fill every vessel at a guessed pressure: equal stage ratios, coolers at their best.
-
-        ``at_rest``: all at that of the suction header, as a machine is found that has settled out.
-        """
+    def reset(self) -> None:
+        """Fill every vessel at a guessed pressure: equal stage ratios, coolers at their best."""
         self._wall = np.full(len(self._places), self.around.jacket_water_k)
         stages = len(self.unit.stages)
         self._water = np.full(stages + 1, self._header_water())
@@ -103,7 +100,7 @@ class Machine:
         self._line_flow = np.full(stages, self.equipment.design_flow_mol_s)
         self._load = 0.8
         self._hurry = 1.0
-        self._fill(at_rest=at_rest)
+        self._fill()
         self._apply()
         self._last: Run | None = None
 
@@ -196,10 +193,9 @@ class Machine:
 
     # --- state
 
-    def _fill(self, *, at_rest: bool) -> None:
+    def _fill(self) -> None:
         around, stages = self.around, len(self.unit.stages)
-        whole = 1.0 if at_rest else around.discharge_pressure_pa / around.suction_pressure_pa
-        ratio = whole ** (1.0 / stages)
+        ratio = (around.discharge_pressure_pa / around.suction_pressure_pa) ** (1.0 / stages)
         amount, temperature, pressures = (np.empty(2 * stages) for _ in range(3))
         for k in range(stages):
             suction_pa = around.suction_pressure_pa * ratio**k

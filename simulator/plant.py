@@ -111,7 +111,9 @@ class UnitLife:
         machine = self._machine
         walls = [self._still.wall_k(float(w), orders.ambient_k) for w in machine.wall_k]
         machine.change(around=self._with_ends(orders), faults=orders.faults)
-        machine.reset(at_rest=True)
+        # Started on its bypass a machine is up to pressure within seconds, its stages at about equal ratios.
+        # To pump it up against the header instead would heat the last stage as no real start does.
+        machine.reset()
         machine.set_walls(walls)
         self._runs, self._orders = True, None
 
