@@ -186,6 +186,7 @@ class Plant:
         self._begins: float | None = None
         self._last_time: float | None = None
         self._plant_time = 0.0
+        self._halted = False
         self.behind_s = 0.0  # of the clock, since pauses were too long to make up for
         self._weather = Weather(self._seed)
         for life in self._lives.values():
@@ -215,6 +216,10 @@ class Plant:
         for one in begun:
             one.result()
 
+    def halt(self) -> None:
+        """From another thread: leave what is being sampled, for good."""
+        self._halted = True
+
     def sample(self, time: float, story_start: float | None) -> Sequence[Sample]:
         """Every tag at one instant; machines turn for the time since the last one.
 
@@ -240,6 +245,8 @@ class Plant:
         elapsed = -1.0 if story_start is None else self.story.round_time(time - story_start)
         samples: list[Sample] = []
         for unit in self._site.units:
+            if self._halted:
+                break
             course = self.story.units[unit.id]
             orders = self._orders(unit, course, elapsed)
             true = self._lives[unit.id].advance(

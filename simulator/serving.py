@@ -120,13 +120,28 @@ async def serve(
             if story_start is None and wires.up:
                 story_start = due
                 began(due)
-            samples = await asyncio.to_thread(plant.sample, due, story_start)
-            if await _stopped_before(stop, due):
+            samples = await _sampled(plant, stop, due, story_start)
+            if samples is None or await _stopped_before(stop, due):
                 return
             elapsed = -1.0 if story_start is None else due - story_start
             await wires.put(due, samples, {name: plant.story.link(name, elapsed) for name in site.sources})
             # A second that could not be kept is left out; the machines make up for its turns.
             due = max(due + PERIOD_S, _next_due(time.time()))
+
+
+async def _sampled(
+    plant: Plant, stop: asyncio.Event, due: float, story_start: float | None
+) -> Sequence[Sample] | None:
+    """None if asked to stop meanwhile: the cranks then halt at the next unit, and nobody waits for them."""
+    sampling = asyncio.create_task(asyncio.to_thread(plant.sample, due, story_start))
+    stopping = asyncio.create_task(stop.wait())
+    await asyncio.wait({sampling, stopping}, return_when=asyncio.FIRST_COMPLETED)
+    if stopping.done():
+        plant.halt()
+        await sampling
+        return None
+    stopping.cancel()
+    return await sampling
 
 
 def _next_due(now: float) -> float:

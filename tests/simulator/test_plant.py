@@ -90,6 +90,7 @@ def test_nothing_moves_before_the_story_begins(plant: Callable[..., Plant]) -> N
     assert all(abs(float(p) - 28.82) < 0.28 for p in values if p is not None)
 
 
+@pytest.mark.slow
 def test_crank_turns_at_its_true_rate(plant: Callable[..., Plant], site: SitePlan) -> None:
     """Turns made after some seconds are speed x time, to one turn, at any pace."""
     for pace in (1.0, 5.0):
@@ -206,6 +207,7 @@ changes:
 """
 
 
+@pytest.mark.slow
 def test_stopped_machine_settles_out_cools_and_starts_again(
     booster: Callable[..., Plant], tmp_path: Path
 ) -> None:
@@ -236,6 +238,7 @@ instruments:
 """
 
 
+@pytest.mark.slow
 def test_instruments_lie_as_the_story_says(plant: Callable[..., Plant], tmp_path: Path) -> None:
     story = tmp_path / "lies.yaml"
     story.write_text(FAULTY, encoding="utf-8")
@@ -317,6 +320,7 @@ print(digest.hexdigest())
 """
 
 
+@pytest.mark.slow
 def test_plant_is_the_same_without_the_formulas_of_the_model(plant: Callable[..., Plant]) -> None:
     """With each expected-value module of the model replaced by a stub that raises, values are unchanged."""
     digest = hashlib.sha256()
@@ -338,3 +342,14 @@ def test_stubs_of_that_test_do_raise() -> None:
         capture_output=True, text=True, timeout=60, check=False,
     )  # fmt: skip
     assert "the plant asked model.kinematics for anything" in done.stderr
+
+
+def test_halted_plant_leaves_what_it_is_at(plant: Callable[..., Plant]) -> None:
+    built = plant("quiet")
+    built.sample(START, START)
+    before = built.life("K-330").turns
+    built.halt()
+    assert built.sample(START + 1, START) == []
+    assert built.life("K-330").turns == before
+    built.reset()
+    assert built.sample(START, START)

@@ -63,7 +63,7 @@ def line(process: "subprocess.Popen[str]") -> str:
 
 
 @pytest.mark.skipif(os.name != "posix", reason="signals of POSIX")
-@pytest.mark.parametrize("number", [signal.SIGTERM, signal.SIGINT])
+@pytest.mark.parametrize("number", [pytest.param(signal.SIGTERM, marks=pytest.mark.slow), signal.SIGINT])
 def test_plant_comes_up_and_ends_when_asked(
     processes: Processes, tmp_path: Path, number: signal.Signals
 ) -> None:
