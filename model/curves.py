@@ -12,7 +12,8 @@ from model.evaluate import stage_inputs
 from model.machine import Side, Stage, Unit
 from model.measured import Measured
 from model.rodload import NO_LOAD_SHARE, positive_intervals
-from model.stage import StageState, held_open, run_stage, stage_frame
+from model.stage import StageState, run_stage, stage_frame
+from model.steps import held_open
 from model.surface import GasSurface
 from model.throw import Throw, end_runs, loads_at, opening_angles
 from model.verdicts import Verdict
@@ -94,6 +95,7 @@ def curves(
     peaks = run_stage(unit, stage, gas, corrections, state).throws[cylinder_number]
     if not np.isfinite(peaks.pin_tension_n).all():
         raise NotEvaluatedError(Verdict.OUT_OF_MODEL)
+    cylinder = unit.load_steps[int(state.load_step[0])].made_of(cylinder)
     runs = end_runs(cylinder, frame, open_ends)
     angles = _angles(opening_angles(cylinder, frame, open_ends)[0])
     ends = []

@@ -8,92 +8,15 @@ or re-expansion is one exponential.
 from dataclasses import dataclass
 
 import numpy as np
-from numpy.typing import ArrayLike, NDArray
+from numpy.typing import NDArray
 
 from model.corrections import Corrections
+from model.efficiency import volumetric_efficiency
 from model.kinematics import angle_of_travel, piston_travel, piston_travel_rate
 from model.machine import End, Side
 from model.valves import full_lift_loss, plate_loss
 
 Array = NDArray[np.float64]
-
-
-def volumetric_efficiency(
-    clearance: ArrayLike, pressure_ratio: ArrayLike, exponent: ArrayLike, density_ratio: ArrayLike = 1.0
-) -> Array:
-    """Gas drawn in by an end, as a share of its swept volume at suction conditions.
-
-    Parameters
-    ----------
-    clearance : array_like
-        Clearance volume over swept volume. [-]
-    pressure_ratio : array_like
-        Discharge pressure over suction pressure. [-]
-    exponent : array_like
-        Exponent of pressure against volume of the re-expansion. [-]
-    density_ratio : array_like
-        Density in the cylinder at the end of suction over that in the suction line (preheat). [-]
-
-    Returns
-    -------
-    ndarray
-        ``density_ratio (1 + c - c r^(1/n))``; below zero where the clearance gas never expands far enough.
-        [-]
-
-    Notes
-    -----
-    With the exponent of pressure against volume there is no compressibility in it. See
-    `volumetric_efficiency_from_temperatures` for the other form.
-
-    References
-    ----------
-    R. Joel, *Basic Engineering Thermodynamics*, chapter 14.
-    """
-    c, r = np.asarray(clearance), np.asarray(pressure_ratio)
-    return np.asarray(np.asarray(density_ratio) * (1 + c - c * r ** (1 / np.asarray(exponent))))
-
-
-def volumetric_efficiency_from_temperatures(
-    clearance: ArrayLike,
-    pressure_ratio: ArrayLike,
-    suction_z: ArrayLike,
-    discharge_z: ArrayLike,
-    temperature_ratio: ArrayLike,
-) -> Array:
-    """The same, from compressibility factors and the isentropic temperatures.
-
-    Parameters
-    ----------
-    clearance : array_like
-        Clearance volume over swept volume. [-]
-    pressure_ratio : array_like
-        Discharge pressure over suction pressure. [-]
-    suction_z : array_like
-        Compressibility factor at suction. [-]
-    discharge_z : array_like
-        Compressibility factor at discharge pressure and isentropic discharge temperature. [-]
-    temperature_ratio : array_like
-        Isentropic discharge temperature over suction temperature. [-]
-
-    Returns
-    -------
-    ndarray
-        ``1 - c ((Zs/Zd) r^(1/k) - 1)`` with ``1/k = 1 - ln(T2/T1)/ln(r)``. [-]
-
-    Notes
-    -----
-    Only with k from the temperatures does this equal the form without compressibility. With the ratio of
-    heat capacities it lies a point too high on natural gas.
-
-    References
-    ----------
-    The bare clearance term of the handbook form; without its allowances in percent.
-    """
-    r = np.asarray(pressure_ratio)
-    power = 1 - np.log(temperature_ratio) / np.log(r)
-    return np.asarray(
-        1 - np.asarray(clearance) * (np.asarray(suction_z) / np.asarray(discharge_z) * r**power - 1)
-    )
 
 
 @dataclass(frozen=True, slots=True, eq=False, kw_only=True)
@@ -161,6 +84,7 @@ class EndCycle:
     suction_opening: Array  # l at which the pressure meets the line
     discharge_opening: Array
     span: float  # ln of the largest over the smallest volume
+    closing: float  # l at which suction valves that close late let compression begin; 0 as a rule
     dead: NDArray[np.bool_]  # neither valve opens: clearance gas to and fro
     held_open: NDArray[np.bool_]
     preload: float
@@ -234,9 +158,12 @@ def end_cycle(
     efficiency = (
         volumetric_efficiency(end.clearance, pd / ps, n_exp, density_ratio) - corrections.volumetric_deficit
     )
+    closing, pushed_back = late_closing(end, stroke_m, rod_m)
+    if closing > 0:
+        efficiency = efficiency - density_ratio * pushed_back
     dead = (efficiency <= 0) & ~held_open
     lateness = corrections.opening_overshoot * speed_rad_s / (2 * np.pi * natural_frequency_hz)
-    suction_opening, discharge_opening = log_ratio / n_exp, log_ratio / n_comp
+    suction_opening, discharge_opening = log_ratio / n_exp, closing + log_ratio / n_comp
     resistance = corrections.valve_loss
     cycle = EndCycle(
         suction_pressure_pa=ps,
@@ -258,6 +185,7 @@ def end_cycle(
         suction_opening=suction_opening,
         discharge_opening=discharge_opening,
         span=float(np.log((1 + end.clearance) / end.clearance)),
+        closing=closing,
         dead=dead,
         held_open=held_open,
         preload=corrections.valve_preload,
@@ -265,6 +193,36 @@ def end_cycle(
         decay=corrections.opening_decay,
     )
     return cycle, np.maximum(efficiency, 0.0)
+
+
+def late_closing(end: End, stroke_m: float, rod_m: float) -> tuple[float, float]:
+    """Where an end begins to compress whose suction valves are held open past its dead centre.
+
+    Parameters
+    ----------
+    end : End
+        The end, with its closing angle.
+    stroke_m : float
+        Stroke. [m]
+    rod_m : float
+        Length of the connecting rod. [m]
+
+    Returns
+    -------
+    tuple of float
+        Logarithm of the largest volume over that at closing, and the share of the swept volume pushed back
+        until then; both 0 for valves that close by themselves. [-]
+
+    References
+    ----------
+    R. S. Khurmi, J. K. Gupta, *Theory of Machines*, chapter 15 (the travel).
+    """
+    if end.valve_closing_rad <= 0:
+        return 0.0, 0.0
+    angle = end.valve_closing_rad + (np.pi if end.side is Side.HEAD else 0.0)
+    travel = float(piston_travel(angle, stroke_m, rod_m)) / stroke_m
+    pushed = 1 - travel if end.side is Side.HEAD else travel
+    return float(-np.log1p(-pushed / (1 + end.clearance))), pushed
 
 
 def _slope_at(end: End, volume: Array, stroke_m: float, rod_m: float) -> Array:
@@ -295,18 +253,19 @@ def suction_stroke(cycle: EndCycle, log_volume: Array, travel_rate_m_rad: Array)
     Notes
     -----
     The larger of re-expansion and open line holds. An end held open breathes through its suction valves.
+    One that closes so late that it never reaches the discharge line expands from as far as it came.
 
     References
     ----------
     R. Joel, *Basic Engineering Thermodynamics*, chapter 14 (the ideal cycle).
     """
-    expansion = cycle.discharge_pressure_pa * np.exp(-cycle.expansion_exponent * log_volume)
+    expansion = _reached_pressure(cycle) * np.exp(-cycle.expansion_exponent * log_volume)
     flow = cycle.suction_loss * travel_rate_m_rad**2
     loss = plate_loss(flow, cycle.suction_pressure_pa, cycle.preload, cycle.full_lift)
     late = np.exp(-np.maximum(log_volume - cycle.suction_opening, 0.0) / cycle.decay)
     line = cycle.suction_pressure_pa - loss - cycle.suction_overshoot_pa * late
     pressure = np.maximum(expansion, line)
-    if cycle.dead.any():
+    if cycle.dead.any() and not cycle.closing:
         pressure = np.where(cycle.dead, expansion, pressure)
     if cycle.held_open.any():
         pressure = np.where(cycle.held_open, cycle.suction_pressure_pa - flow, pressure)
@@ -333,25 +292,41 @@ def discharge_stroke(cycle: EndCycle, log_volume: Array, travel_rate_m_rad: Arra
     Notes
     -----
     The smaller of compression and open line holds. An end held open pushes its gas back through the suction
-    valves, which the unloader holds at full lift.
+    valves, which the unloader holds at full lift; one that closes late does so until then, and compresses
+    from suction pressure.
 
     References
     ----------
     R. Joel, *Basic Engineering Thermodynamics*, chapter 14 (the ideal cycle).
     """
-    compression = cycle.suction_pressure_pa * np.exp(cycle.compression_exponent * log_volume)
+    compression = cycle.suction_pressure_pa * np.exp(
+        cycle.compression_exponent * (log_volume - cycle.closing if cycle.closing else log_volume)
+    )
+    if cycle.closing:
+        back = cycle.suction_loss * travel_rate_m_rad**2
+        compression = np.where(log_volume < cycle.closing, cycle.suction_pressure_pa + back, compression)
     flow = cycle.discharge_loss * travel_rate_m_rad**2
     loss = plate_loss(flow, cycle.discharge_pressure_pa, cycle.preload, cycle.full_lift)
     late = np.exp(-np.maximum(log_volume - cycle.discharge_opening, 0.0) / cycle.decay)
     line = cycle.discharge_pressure_pa + loss + cycle.discharge_overshoot_pa * late
     pressure = np.minimum(compression, line)
-    if cycle.dead.any():
+    if cycle.dead.any() and not cycle.closing:
         trapped = cycle.discharge_pressure_pa * np.exp(-cycle.expansion_exponent * (cycle.span - log_volume))
         pressure = np.where(cycle.dead, trapped, pressure)
     if cycle.held_open.any():
         back = cycle.suction_loss * travel_rate_m_rad**2
         pressure = np.where(cycle.held_open, cycle.suction_pressure_pa + back, pressure)
     return pressure, compression - line
+
+
+def _reached_pressure(cycle: EndCycle) -> Array:
+    """Pressure from which an end re-expands: the discharge line, or what late closing leaves of it."""
+    if not cycle.closing:
+        return cycle.discharge_pressure_pa
+    reached = cycle.suction_pressure_pa * np.exp(cycle.compression_exponent * (cycle.span - cycle.closing))
+    return np.asarray(
+        np.where(cycle.dead, np.minimum(reached, cycle.discharge_pressure_pa), cycle.discharge_pressure_pa)
+    )
 
 
 def end_pressure(cycle: EndCycle, geometry: EndGeometry) -> Array:

@@ -49,8 +49,11 @@ _THROW_KEYS: Final = {
     "gas_load_compression": "gas_compression_n",
     "pin_load_tension": "pin_tension_n",
     "pin_load_compression": "pin_compression_n",
+    "rod_load_tension": "rod_tension_n",
+    "rod_load_compression": "rod_compression_n",
     "reversal_degrees": "reversal_rad",
     "reversal_percent": "reversal_share",
+    "reversal_crossings": "crossings",
 }
 
 

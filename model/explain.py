@@ -12,11 +12,12 @@ from model.evaluate import stage_inputs
 from model.machine import Cylinder, Stage, Unit
 from model.measured import Measured
 from model.quantities import LOWER_LIMITS, QUANTITIES, Kind, Quantity, Scope, series_name, split_series
-from model.stage import StageState, held_open, stage_frame
+from model.stage import StageState, stage_frame
+from model.steps import held_open
 from model.surface import GasSurface
 from model.verdicts import Verdict
 from model.working import Sheet, Working, gas_functions, joined
-from model.working_cylinder import LOADS, Set, geometry, peak, power, reversal_steps, tag
+from model.working_cylinder import LOADS, Set, crossings, geometry, peak, power, reversal_steps, tag
 
 _CORRECTIONS: Final[Mapping[str, tuple[str, str]]] = MappingProxyType(
     {
@@ -181,6 +182,8 @@ class _Builder:
             return peak(self._sheet, at, key)
         power(self._sheet, at)
         duration, magnitude = reversal_steps(self._sheet, at)
+        if key == "reversal_crossings":
+            return crossings(self._sheet, at)
         return duration if key == "reversal_degrees" else magnitude
 
     def _margin(self, subject: str, quantity: Quantity) -> str:
@@ -241,9 +244,10 @@ class _Builder:
         sheet.step("rho_2", "its density", "rho(T_2, p_d)", "kg/m3", source)
         sheet.step("n", "exponent of pressure against volume", "log(r) / log(rho_2/rho_1)", "1", "definition")
         found = {}
+        step = unit.load_steps[int(state.load_step[0])]
         for cylinder in stage.cylinders:
             found[cylinder.number] = Set(
-                unit=unit, cylinder=cylinder, frame=frame, corrections=self._corrections,
+                unit=unit, cylinder=step.made_of(cylinder), frame=frame, corrections=self._corrections,
                 held_open=held_open(unit, cylinder, state.load_step),
             )  # fmt: skip
             geometry(sheet, found[cylinder.number])

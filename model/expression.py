@@ -34,6 +34,11 @@ def _reversal_angle(load: Array, tension: Array, compression: Array) -> Array:
     return np.asarray(found.duration_rad[0])
 
 
+def _reversal_crossings(load: Array, tension: Array, compression: Array) -> Array:
+    found = reversal(np.atleast_2d(load), np.atleast_1d(tension), np.atleast_1d(compression))
+    return np.asarray(found.crossings[0])
+
+
 def _plate(flow: Array, line: Array, preload: float, full_lift: float) -> Array:
     return plate_loss(np.asarray(flow), np.asarray(line), float(preload), float(full_lift))
 
@@ -46,6 +51,11 @@ _PLATE_WORDS: Final = (
 _REVERSAL_WORDS: Final = (
     "longest unbroken stretch of the sign that lasts for less of the turn, straight lines between the steps;"
     " loads under 0.2 % of the peak count as none"
+)
+
+_CROSSINGS_WORDS: Final = (
+    "twice the number of unbroken stretches of the sign that has fewer of them; loads under 0.2 % of the peak"
+    " count as none"
 )
 
 FUNCTIONS: Final[Mapping[str, tuple[Function, str]]] = MappingProxyType(
@@ -61,6 +71,7 @@ FUNCTIONS: Final[Mapping[str, tuple[Function, str]]] = MappingProxyType(
         "min": (np.minimum, "the smaller of two"),
         "sum": (np.sum, "sum over the steps of one turn"),
         "where": (np.where, "the second where the first is 1, else the third"),
+        "below": (np.less, "1 where the first is less than the second, else 0"),
         "plate": (
             _plate,
             _PLATE_WORDS,
@@ -68,6 +79,10 @@ FUNCTIONS: Final[Mapping[str, tuple[Function, str]]] = MappingProxyType(
         "reversal_angle": (
             _reversal_angle,
             _REVERSAL_WORDS,
+        ),
+        "reversal_crossings": (
+            _reversal_crossings,
+            _CROSSINGS_WORDS,
         ),
     }
 )

@@ -74,6 +74,15 @@ class Cylinder:
     def crank_area_m2(self) -> float:
         return math.pi / 4 * (self.bore_m**2 - self.rod_diameter_m**2)
 
+    @property
+    def rod_area_m2(self) -> float:
+        return math.pi / 4 * self.rod_diameter_m**2
+
+    @property
+    def rod_mass_share(self) -> float:
+        """Share of the moving mass that the piston rod carries."""
+        return 1 - self.crosshead_mass_kg / self.reciprocating_mass_kg
+
     def area_m2(self, side: Side) -> float:
         return self.head_area_m2 if side is Side.HEAD else self.crank_area_m2
 

@@ -85,6 +85,12 @@ _PIN_TENSION = _estimate("pin_load_tension", "combined load at the pin, tension"
 _PIN_COMPRESSION = _estimate(
     "pin_load_compression", "combined load at the pin, compression", _C, "force", "N", "kN", 1
 )
+_ROD_TENSION = _estimate(
+    "rod_load_tension", "combined load at the piston rod, tension", _C, "force", "N", "kN", 1
+)
+_ROD_COMPRESSION = _estimate(
+    "rod_load_compression", "combined load at the piston rod, compression", _C, "force", "N", "kN", 1
+)
 _REVERSAL_DEGREES = _estimate(
     "reversal_degrees", "load reversal at the pin, duration", _C, "angle", "rad", "deg", 0
 )
@@ -150,8 +156,20 @@ _TABLE: Final = (
     _GAS_COMPRESSION,
     _PIN_TENSION,
     _PIN_COMPRESSION,
+    _ROD_TENSION,
+    _ROD_COMPRESSION,
     _REVERSAL_DEGREES,
     _REVERSAL_PERCENT,
+    _estimate(
+        "reversal_crossings",
+        "changes of sign of the load at the pin in a turn",
+        _C,
+        "index",
+        "1",
+        "1",
+        0,
+        u=False,
+    ),
     # state
     Quantity(
         key="run_state",

@@ -88,6 +88,7 @@ class Reversal:
     duration_rad: Array
     share: Array  # the smaller peak / the larger
     tension_is_minor: NDArray[np.bool_]  # the sign that lasts for less of the turn
+    crossings: Array  # changes of sign in a turn
 
 
 def reversal(load_n: Array, tension_n: Array, compression_n: Array) -> Reversal:
@@ -106,7 +107,8 @@ def reversal(load_n: Array, tension_n: Array, compression_n: Array) -> Reversal:
     -------
     Reversal
         Longest contiguous run of the sign that lasts for less of the turn [rad], and the smaller peak over
-        the larger [-]. Both are 0 where the load never changes sign.
+        the larger [-]. Both are 0 where the load never changes sign. And how often it does in a turn: twice
+        the number of runs of the sign that has fewer.
 
     Notes
     -----
@@ -120,8 +122,8 @@ def reversal(load_n: Array, tension_n: Array, compression_n: Array) -> Reversal:
     peak = np.maximum(tension_n, compression_n)
     dead = (NO_LOAD_SHARE * peak)[:, None]
     step = 2 * np.pi / load_n.shape[1]
-    pull, pull_longest = _positive_runs(load_n - dead)
-    push, push_longest = _positive_runs(-load_n - dead)
+    pull, pull_longest, pulls = _positive_runs(load_n - dead)
+    push, push_longest, pushes = _positive_runs(-load_n - dead)
     minor = pull < push
     reverses = (pull > 0) & (push > 0)
     duration = np.where(reverses, np.where(minor, pull_longest, push_longest) * step, 0.0)
@@ -131,6 +133,7 @@ def reversal(load_n: Array, tension_n: Array, compression_n: Array) -> Reversal:
         duration_rad=np.where(unknown, np.nan, duration),
         share=np.where(unknown, np.nan, share),
         tension_is_minor=minor,
+        crossings=np.where(unknown, np.nan, 2.0 * np.minimum(pulls, pushes)),
     )
 
 
@@ -169,8 +172,8 @@ def positive_intervals(load_n: Array, angle_rad: Array, dead_n: float) -> tuple[
     return tuple(zip(bounds[::2], bounds[1::2], strict=True))
 
 
-def _positive_runs(g: Array) -> tuple[Array, Array]:
-    """Total and longest contiguous length, in steps, over which each closed row is positive."""
+def _positive_runs(g: Array) -> tuple[Array, Array, NDArray[np.intp]]:
+    """Total and longest length, in steps, of runs in which a closed row is positive, and their number."""
     after = np.concatenate([g[:, 1:], g[:, :1]], axis=1)
     here = g > 0
     low, high = np.minimum(g, after), np.maximum(g, after)
@@ -181,4 +184,4 @@ def _positive_runs(g: Array) -> tuple[Array, Array]:
     end = np.cumsum(twice, axis=1)
     base = np.maximum.accumulate(np.where(starts, end - twice, 0.0), axis=1)
     longest = np.minimum((end - base).max(axis=1), g.shape[1])
-    return total, longest
+    return total, longest, np.count_nonzero(~here & (after > 0), axis=1)

@@ -1,6 +1,6 @@
 """One stage at the pressures and temperature measured around it."""
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Final
 
 import numpy as np
@@ -8,9 +8,10 @@ from numpy.typing import ArrayLike, NDArray
 
 from model.corrections import Corrections
 from model.cycle import GasPath
-from model.machine import Cylinder, EndState, Side, Stage, Unit
+from model.machine import Cylinder, Side, Stage, Unit
+from model.steps import held_open, makes, run_cylinder
 from model.surface import GasSurface
-from model.throw import ANGLES, Frame, Throw, run_throw
+from model.throw import ANGLES, Frame, Throw
 
 Array = NDArray[np.float64]
 
@@ -222,16 +223,6 @@ def stage_frame(
     return frame, enthalpy
 
 
-def held_open(unit: Unit, cylinder: Cylinder, load_step: NDArray[np.intp]) -> dict[Side, NDArray[np.bool_]]:
-    """Which frames hold an end open, (frames, 1) by side."""
-    return {
-        side: np.array(
-            [step.state(cylinder.number, side) is EndState.HELD_OPEN for step in unit.load_steps], bool
-        )[load_step][:, None]
-        for side in Side
-    }
-
-
 def run_stage(
     unit: Unit,
     stage: Stage,
@@ -275,10 +266,9 @@ def run_stage(
     seen: dict[tuple[object, ...], Throw] = {}
     throws = {}
     for cylinder in stage.cylinders:
-        open_ends = held_open(unit, cylinder, state.load_step)
-        key = _likeness(cylinder, open_ends)
+        key = _likeness(unit, cylinder, held_open(unit, cylinder, state.load_step))
         if key not in seen:
-            seen[key] = run_throw(cylinder, frame, open_ends, angles)
+            seen[key] = run_cylinder(unit, cylinder, frame, state.load_step, angles)
         throws[cylinder.number] = seen[key]
     runs = tuple(throws.values())
     flow, power = sum((t.flow_kg_s for t in runs), 0.0), sum((t.power_w for t in runs), 0.0)
@@ -300,13 +290,10 @@ def run_stage(
     )
 
 
-def _likeness(cylinder: Cylinder, open_ends: dict[Side, NDArray[np.bool_]]) -> tuple[object, ...]:
+def _likeness(unit: Unit, cylinder: Cylinder, open_ends: dict[Side, NDArray[np.bool_]]) -> tuple[object, ...]:
+    """What two cylinders have in common that are the same in all but their number."""
     return (
-        cylinder.bore_m,
-        cylinder.rod_diameter_m,
-        cylinder.tail_rod_diameter_m,
-        cylinder.reciprocating_mass_kg,
-        cylinder.valve_natural_frequency_hz,
-        cylinder.ends,
+        replace(cylinder, number=0),
+        *(made.ends for made in makes(unit, cylinder)),
         *(open_ends[side].tobytes() for side in Side),
     )

@@ -9,7 +9,8 @@ from numpy.typing import NDArray
 from model.corrections import Corrections
 from model.cycle import EndGeometry, discharge_stroke, end_geometry, suction_stroke
 from model.machine import Cylinder, End, Side, Stage, Unit
-from model.stage import StageState, held_open, stage_frame
+from model.stage import StageState, stage_frame
+from model.steps import by_make, frame_rows, held_open, makes
 from model.surface import GasSurface
 from model.throw import ANGLES, EndRun, Frame, end_runs
 from model.valves import full_lift_loss
@@ -32,9 +33,10 @@ def alike(unit: Unit, stage: Stage) -> tuple[tuple[Cylinder, int], ...]:
     found: dict[tuple[object, ...], tuple[Cylinder, int]] = {}
     for cylinder in stage.cylinders:
         states = tuple(step.state(cylinder.number, side) for step in unit.load_steps for side in Side)
+        ends = tuple(made.ends for made in makes(unit, cylinder))
         key = (
             cylinder.bore_m, cylinder.rod_diameter_m, cylinder.tail_rod_diameter_m,
-            cylinder.valve_natural_frequency_hz, cylinder.ends, states,
+            cylinder.valve_natural_frequency_hz, cylinder.ends, ends, states,
         )  # fmt: skip
         found[key] = (found.get(key, (cylinder, 0))[0], found.get(key, (cylinder, 0))[1] + 1)
     return tuple(found.values())
@@ -77,15 +79,17 @@ def stage_work(
     """
     frame, enthalpy = stage_frame(unit, gas, corrections, state)
     turns = state.speed_rad_s / (2 * np.pi)
-    flow: Array = np.zeros(turns.size)
-    full = power = flow
+    flow, full, power = (np.zeros(turns.size) for _ in range(3))
     for cylinder, count in cylinders:
-        for run in end_runs(cylinder, frame, held_open(unit, cylinder, state.load_step)):
-            volume = count * run.area_m2 * unit.stroke_m * turns
-            capacity = run.efficiency[:, 0] * volume * frame.path.suction_density_kg_m3[:, 0]
-            full = full + capacity
-            flow = flow + np.where(run.cycle.held_open[:, 0], 0.0, capacity)
-            power = power - volume * _mean_work(run, frame, angles)
+        for made, rows in by_make(unit, cylinder, state.load_step):
+            at = slice(None) if rows is None else rows
+            part = frame_rows(frame, rows)
+            for run in end_runs(made, part, held_open(unit, cylinder, state.load_step[at])):
+                volume = count * run.area_m2 * unit.stroke_m * turns[at]
+                capacity = run.efficiency[:, 0] * volume * part.path.suction_density_kg_m3[:, 0]
+                full[at] += capacity
+                flow[at] += np.where(run.cycle.held_open[:, 0], 0.0, capacity)
+                power[at] -= volume * _mean_work(run, part, angles)
     return StageWork(flow_kg_s=flow, full_flow_kg_s=full, power_w=power, enthalpy_j_kg=enthalpy)
 
 

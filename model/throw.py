@@ -19,7 +19,7 @@ from model.cycle import (
     suction_stroke,
 )
 from model.kinematics import piston_travel_curvature
-from model.machine import Cylinder, End, Side
+from model.machine import Cylinder, End, OtherSide, Side
 from model.rodload import gas_load, inertia_load, reversal
 
 Array = NDArray[np.float64]
@@ -54,8 +54,11 @@ class Throw:
     gas_compression_n: Array
     pin_tension_n: Array
     pin_compression_n: Array
+    rod_tension_n: Array  # combined, at the piston rod
+    rod_compression_n: Array
     reversal_rad: Array
     reversal_share: Array
+    crossings: Array  # how often the load at the pin changes sign in a turn
 
 
 @dataclass(frozen=True, slots=True, eq=False, kw_only=True)
@@ -132,12 +135,17 @@ def run_throw(cylinder: Cylinder, frame: Frame, held_open: dict[Side, Mask], ang
     pin, pin_there = gas + inertia, gas_there + inertia_there
     gas_tension, gas_compression = _peaks(gas, gas_there)
     pin_tension, pin_compression = _peaks(pin, pin_there)
+    rod_tension, rod_compression = pin_tension, pin_compression
+    if cylinder.crosshead_mass_kg:
+        share = cylinder.rod_mass_share
+        rod_tension, rod_compression = _peaks(gas + share * inertia, gas_there + share * inertia_there)
     turned = reversal(pin, pin_tension, pin_compression)
     return Throw(
         flow_kg_s=flow, full_flow_kg_s=full, swept_m3_s=swept, power_w=power,
         gas_tension_n=gas_tension, gas_compression_n=gas_compression,
         pin_tension_n=pin_tension, pin_compression_n=pin_compression,
-        reversal_rad=turned.duration_rad, reversal_share=turned.share,
+        rod_tension_n=rod_tension, rod_compression_n=rod_compression,
+        reversal_rad=turned.duration_rad, reversal_share=turned.share, crossings=turned.crossings,
     )  # fmt: skip
 
 
@@ -169,7 +177,8 @@ def loads_at(
     Returns
     -------
     tuple of ndarray
-        Gas load and inertia load (frames, n), tension positive. [N]
+        Gas load and inertia load at the pin (frames, n), tension positive; the piston rod carries the
+        `Cylinder.rod_mass_share` of the second. [N]
 
     References
     ----------
@@ -193,8 +202,11 @@ def _loads(
     angle_rad: Array,
     traces: list[Array] | None,
 ) -> tuple[Array, Array]:
-    # A side without valves is open to the suction line, as a single-acting cylinder is built.
-    sides = dict.fromkeys(Side, frame.path.suction_pressure_pa)
+    # A side without valves is open to what the nameplate says.
+    outside = frame.ambient_pressure_pa
+    suction = cylinder.other_side is OtherSide.SUCTION
+    without = frame.path.suction_pressure_pa if suction else np.full_like(frame.speed_rad_s, outside)
+    sides = dict.fromkeys(Side, without)
     for index, run in enumerate(runs):
         if traces is None:
             geometry = end_geometry(angle_rad, run.end, frame.stroke_m, frame.rod_m)
@@ -203,8 +215,10 @@ def _loads(
             sides[run.end.side] = traces[index]
     gas = gas_load(
         sides[Side.HEAD], sides[Side.CRANK], head_area_m2=cylinder.head_area_m2,
-        crank_area_m2=cylinder.crank_area_m2, ambient_pressure_pa=frame.ambient_pressure_pa,
+        crank_area_m2=cylinder.crank_area_m2, ambient_pressure_pa=outside,
     )  # fmt: skip
+    if cylinder.distance_piece_pressure_pa is not None:  # pushes on the rod's section, where air else does
+        gas = gas + (cylinder.distance_piece_pressure_pa - outside) * cylinder.rod_area_m2
     curvature = piston_travel_curvature(angle_rad, frame.stroke_m, frame.rod_m)
     return gas, inertia_load(cylinder.reciprocating_mass_kg, frame.speed_rad_s, curvature)
 

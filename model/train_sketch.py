@@ -14,6 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from model.corrections import Corrections
+from model.cycle import late_closing
 from model.machine import EndState, Unit
 from model.rows import rows_of
 from model.surface import GAS_CONSTANT
@@ -41,7 +42,8 @@ class StageEnds:
     """The compression ends of one stage."""
 
     volume_m3: Array  # (ends,) swept
-    clearance: Array  # (ends,)
+    clearance: Array  # (load steps, ends)
+    reach: Array  # (load steps, ends) volume in which compression begins / swept volume
     loaded: Array  # (load steps, ends) 1 or 0
 
 
@@ -53,10 +55,14 @@ def stage_ends(unit: Unit) -> tuple[StageEnds, ...]:
         loaded = [
             [step.state(c.number, e.side) is EndState.LOADED for c, e in pairs] for step in unit.load_steps
         ]
+        made = [[e for c in stage.cylinders for e in step.made_of(c).ends] for step in unit.load_steps]
+        clearance = np.array([[e.clearance for e in ends] for ends in made])
+        back = [[late_closing(e, unit.stroke_m, unit.connecting_rod_m)[1] for e in ends] for ends in made]
         found.append(
             StageEnds(
                 volume_m3=np.array([c.area_m2(e.side) * unit.stroke_m for c, e in pairs]),
-                clearance=np.array([e.clearance for _, e in pairs]),
+                clearance=clearance,
+                reach=1 + clearance - np.array(back),
                 loaded=np.array(loaded, np.float64),
             )
         )
@@ -101,6 +107,8 @@ def providers(
     """The formulas of a sketch, for the rows of a boundary."""
     turns = boundary.speed_rad_s / (2 * np.pi)
     loaded = [part.loaded[boundary.load_step] * part.volume_m3 for part in ends]
+    clearance = [part.clearance[boundary.load_step] for part in ends]
+    reach = [part.reach[boundary.load_step] for part in ends]
 
     def stage(k: int, ps: Array, pd: Array, ts: Array, _through: Array) -> tuple[Array, Array]:
         log_r = np.log(pd / ps)
@@ -109,8 +117,7 @@ def providers(
         rise = np.expm1(heat * log_r)
         density = sketch.density[:, k] / (1 + corrections.preheat * rise)
         swell = np.exp(log_r / (corrections.expansion_exponent * sketch.exponent[:, k]))
-        c = ends[k].clearance
-        raw = density[:, None] * (1 + c - c * swell[:, None]) - corrections.volumetric_deficit
+        raw = density[:, None] * (reach[k] - clearance[k] * swell[:, None]) - corrections.volumetric_deficit
         low = _LEAST_EFFICIENCY
         efficiency = np.where(raw > low, raw, low * np.exp(np.minimum(raw / low - 1, 0.0)))
         drawn = (loaded[k] * efficiency).sum(axis=1) * turns

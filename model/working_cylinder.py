@@ -7,7 +7,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from model.corrections import Corrections
-from model.machine import Cylinder, End, Side, Unit
+from model.machine import Cylinder, End, OtherSide, Side, Unit
 from model.throw import ANGLES, EndRun, Frame, end_runs, loads_at, opening_angles
 from model.working import Sheet
 
@@ -25,7 +25,15 @@ LOADS: Final = {
     "gas_load_compression": ("gas", -1.0),
     "pin_load_tension": ("pin", 1.0),
     "pin_load_compression": ("pin", -1.0),
+    "rod_load_tension": ("rod", 1.0),
+    "rod_load_compression": ("rod", -1.0),
 }
+
+
+_LOAD_LETTERS: Final = {"gas": "G", "pin": "P", "rod": "R"}
+_LOAD_WORDS: Final = {
+    "gas": "gas load", "pin": "combined load at the pin", "rod": "combined load at the piston rod",
+}  # fmt: skip
 
 
 @dataclass(frozen=True, slots=True, eq=False, kw_only=True)
@@ -56,6 +64,7 @@ def geometry(sheet: Sheet, at: Set) -> None:
     sheet.given(f"d_{number}", "piston rod diameter", cylinder.rod_diameter_m, "m", "nameplate")
     sheet.given(f"t_{number}", "tail rod diameter", cylinder.tail_rod_diameter_m, "m", "nameplate")
     sheet.given(f"m_{number}", "mass outboard of the pin", cylinder.reciprocating_mass_kg, "kg", "nameplate")
+    sheet.given(f"mx_{number}", "that of its crosshead", cylinder.crosshead_mass_kg, "kg", "nameplate")
     sheet.given(
         f"f_{number}", "natural frequency of the valve plates", cylinder.valve_natural_frequency_hz, "Hz",
         "nameplate",
@@ -73,7 +82,7 @@ def _end(sheet: Sheet, at: Set, run: EndRun) -> None:
     end, e = run.end, tag(at.cylinder, run.end.side)
     side = f"{run.end.side} end of cylinder {at.cylinder.number}"
     loaded = not bool(run.cycle.held_open[0, 0])
-    sheet.given(f"c_{e}", f"clearance of the {side}", _clearance(run), "1", "nameplate")
+    _clearance(sheet, at, end, e)
     sheet.given(
         f"f_s{e}", "effective suction valve area / piston area", end.suction_area_ratio, "1", "nameplate"
     )
@@ -83,7 +92,7 @@ def _end(sheet: Sheet, at: Set, run: EndRun) -> None:
     sheet.given(f"a_{e}", "1 if the end is loaded, 0 if held open", float(loaded), "1", "load-step table")
     sheet.step(
         f"VE_{e}", f"volumetric efficiency of the {side} when loaded",
-        f"max(rho_1/rho_s * (1 + c_{e} - c_{e} * r**(1/(k_e*n))) - dve, 0)", "1", _JOEL,
+        f"max(rho_1/rho_s * (1 + c_{e} - c_{e} * r**(1/(k_e*n)){_late(end, e)}) - dve, 0)", "1", _JOEL,
     )  # fmt: skip
     sheet.step(f"Q_{e}", f"volume swept by the {side}", f"A_{e} * S * w / (2*pi)", "m3/s", "geometry")
     sheet.step(f"F_{e}", f"mass flow of the {side}", f"a_{e} * VE_{e} * Q_{e} * rho_s", "kg/s", "definition")
@@ -99,7 +108,8 @@ def _end(sheet: Sheet, at: Set, run: EndRun) -> None:
     )  # fmt: skip
     number = at.cylinder.number
     sheet.step(f"l_s{e}", "ln of volume at which suction opens", "log(r) / (k_e*n)", "1", _JOEL)
-    sheet.step(f"l_d{e}", "ln of volume at which discharge opens", "log(r) / (k_c*n)", "1", _JOEL)
+    late = f"l_c{e} + " if end.valve_closing_rad > 0 else ""
+    sheet.step(f"l_d{e}", "ln of volume at which discharge opens", f"{late}log(r) / (k_c*n)", "1", _JOEL)
     openings = (
         (f"s{e}", f"c_{e} * exp(l_s{e})", "k_e", "p_s"),
         (f"d{e}", f"(1 + c_{e}) * exp(-l_d{e})", "k_c", "p_d"),
@@ -122,9 +132,36 @@ def _end(sheet: Sheet, at: Set, run: EndRun) -> None:
         )  # fmt: skip
 
 
-def _clearance(run: EndRun) -> float:
-    end: End = run.end
-    return end.clearance
+def _clearance(sheet: Sheet, at: Set, end: End, e: str) -> None:
+    """Clearance with its pockets, and where compression begins if the suction valves close late."""
+    words = f"clearance of the {end.side} end of cylinder {at.cylinder.number}"
+    _, bare = at.unit.cylinder(at.cylinder.number)
+    plain = next(other for other in bare.ends if other.side is end.side)
+    if end.clearance == plain.clearance:
+        sheet.given(f"c_{e}", words, end.clearance, "1", "nameplate")
+    else:
+        sheet.given(f"c0_{e}", f"{words}, pockets shut", plain.clearance, "1", "nameplate")
+        sheet.given(
+            f"cp_{e}", "what its pockets add", end.clearance - plain.clearance, "1", "load-step table"
+        )
+        sheet.step(f"c_{e}", words, f"c0_{e} + cp_{e}", "1", "geometry")
+    if end.valve_closing_rad <= 0:
+        return
+    sheet.given(
+        f"y_{e}", "crank angle past dead centre at which its suction valves close", end.valve_closing_rad,
+        "rad", "load-step table",
+    )  # fmt: skip
+    theta = f"(pi + y_{e})" if end.side is Side.HEAD else f"y_{e}"
+    travel = f"(R*(1 - cos({theta})) + L*(1 - sqrt(1 - (lam*sin({theta}))**2)))/S"
+    back = f"1 - {travel}" if end.side is Side.HEAD else travel
+    sheet.step(f"q_{e}", "share of the swept volume pushed back until then", back, "1", _KHURMI)
+    sheet.step(
+        f"l_c{e}", "ln of the largest volume / volume there", f"-log(1 - q_{e}/(1 + c_{e}))", "1", "geometry"
+    )
+
+
+def _late(end: End, e: str) -> str:
+    return f" - q_{e}" if end.valve_closing_rad > 0 else ""
 
 
 def _rate(theta: str) -> str:
@@ -157,15 +194,25 @@ def trace(sheet: Sheet, at: Set, suffix: str, angle: Array, words: str) -> None:
         present[run.end.side] = _pressure(sheet, at, run, suffix)
     for side in Side:
         if side not in present:
-            symbol = f"p_{letter(side)}{suffix}"
-            sheet.step(symbol, f"the {side} side is open to the suction line", "p_s", "Pa", "construction")
+            symbol, suction = f"p_{letter(side)}{suffix}", at.cylinder.other_side is OtherSide.SUCTION
+            words, line = ("the suction line", "p_s") if suction else ("the air", "p_a + 0*p_s")
+            sheet.step(symbol, f"the {side} side is open to {words}", line, "Pa", "construction")
     head, crank = tag(at.cylinder, Side.HEAD), tag(at.cylinder, Side.CRANK)
+    outside = f"p_a*(A_{head} - A_{crank})"
+    if at.cylinder.distance_piece_pressure_pa is not None:
+        piece = at.cylinder.distance_piece_pressure_pa
+        sheet.given(f"p_p{suffix}", "pressure in the distance piece", piece, "Pa", "nameplate")
+        outside += f" + (p_p{suffix} - p_a) * pi/4*d_{number}**2"
     sheet.step(
         f"G_{suffix}", "gas load, tension positive",
-        f"p_C{suffix}*A_{crank} - p_H{suffix}*A_{head} + p_a*(A_{head} - A_{crank})", "N", _BLOCH,
+        f"p_C{suffix}*A_{crank} - p_H{suffix}*A_{head} + {outside}", "N", _BLOCH,
     )  # fmt: skip
     sheet.step(f"I_{suffix}", "inertia load", f"m_{number} * w**2 * b_{suffix}", "N", _KHURMI)
     sheet.step(f"P_{suffix}", "combined load at the pin", f"G_{suffix} + I_{suffix}", "N", "API Standard 618")
+    sheet.step(
+        f"R_{suffix}", "combined load at the piston rod",
+        f"G_{suffix} + (1 - mx_{number}/m_{number}) * I_{suffix}", "N", "the same without the crosshead",
+    )  # fmt: skip
 
 
 def _pressure(sheet: Sheet, at: Set, run: EndRun, suffix: str) -> str:
@@ -183,9 +230,11 @@ def _pressure(sheet: Sheet, at: Set, run: EndRun, suffix: str) -> str:
         sheet.step(name, f"{what}, held open", f"p_s + {sign} * K_s{e} * {speed}", "Pa", _ORIFICE)
         return name
     grows, shrinks = f"log({volume}/c_{e})", f"log((1 + c_{e})/{volume})"
-    expansion = f"p_d * exp(-k_e*n * {grows})"
-    if bool(run.cycle.dead[0, 0]):
-        span = f"log((1 + c_{e})/c_{e})"
+    late, dead = run.end.valve_closing_rad > 0, bool(run.cycle.dead[0, 0])
+    span = f"log((1 + c_{e})/c_{e})"
+    reached = f"min(p_s * exp(k_c*n * ({span} - l_c{e})), p_d)" if late and dead else "p_d"
+    expansion = f"{reached} * exp(-k_e*n * {grows})"
+    if dead and not late:
         trapped = f"p_d * exp(-k_e*n * ({span} - {shrinks}))"
         sheet.step(
             name, f"{what}, clearance gas to and fro", f"where({draws}, {expansion}, {trapped})", "Pa", _JOEL
@@ -194,6 +243,10 @@ def _pressure(sheet: Sheet, at: Set, run: EndRun, suffix: str) -> str:
     line_s = f"p_s - plate(K_s{e}*{speed}, p_s, p0, p1) - o_s{e} * exp(-max({grows} - l_s{e}, 0)/wo)"
     line_d = f"p_d + plate(K_d{e}*{speed}, p_d, p0, p1) + o_d{e} * exp(-max({shrinks} - l_d{e}, 0)/wo)"
     compression = f"p_s * exp(k_c*n * {shrinks})"
+    if late:
+        compression = (
+            f"where(below({shrinks}, l_c{e}), p_s + K_s{e}*{speed}, p_s * exp(k_c*n * ({shrinks} - l_c{e})))"
+        )
     sheet.step(
         name, f"{what}: re-expansion until suction opens, compression until discharge opens",
         f"where({draws}, max({expansion}, {line_s}), min({compression}, {line_d}))", "Pa",
@@ -228,16 +281,17 @@ def peak(sheet: Sheet, at: Set, key: str) -> str:
     angles = np.arange(ANGLES, dtype=np.float64)[None, :] * (2 * np.pi / ANGLES)
     angles = np.concatenate([angles, opening_angles(at.cylinder, at.frame, at.held_open)], axis=1)
     gas, inertia = loads_at(at.cylinder, end_runs(at.cylinder, at.frame, at.held_open), at.frame, angles)
-    load = sign * (gas if kind == "gas" else gas + inertia)[0]
+    carried = {"gas": 0.0, "pin": 1.0, "rod": at.cylinder.rod_mass_share}[kind]
+    load = sign * (gas + carried * inertia)[0]
     place = int(np.argmax(load))
     word = "tension" if sign > 0 else "compression"
     suffix = f"{number}{kind}{word[0]}"
     where = f"angle of the largest {word}, sought at {ANGLES} steps and where valves open"
     trace(sheet, at, suffix, np.asarray(angles[0, place]), where)
     result = f"{kind}_{word}_{number}"
-    load_symbol = f"G_{suffix}" if kind == "gas" else f"P_{suffix}"
+    load_symbol = f"{_LOAD_LETTERS[kind]}_{suffix}"
     text = f"max({load_symbol}, 0)" if sign > 0 else f"max(-{load_symbol}, 0)"
-    load_words = "gas load" if kind == "gas" else "combined load at the pin"
+    load_words = _LOAD_WORDS[kind]
     sheet.step(result, f"largest {word}, {load_words}", text, "N", "API Standard 618, 5th ed., 6.6")
     return result
 
@@ -258,3 +312,14 @@ def reversal_steps(sheet: Sheet, at: Set) -> tuple[str, str]:
         f"where({duration}, min({tension}, {compression}) / max({tension}, {compression}), 0)", "1", _API,
     )  # fmt: skip
     return duration, magnitude
+
+
+def crossings(sheet: Sheet, at: Set) -> str:
+    """How often the load at the pin changes sign; power and both measures of reversal must stand already."""
+    number = at.cylinder.number
+    symbol = f"crossings_{number}"
+    sheet.step(
+        symbol, "changes of sign of the load at the pin in a turn",
+        f"reversal_crossings(P_{number}, pin_tension_{number}, pin_compression_{number})", "1", _API,
+    )  # fmt: skip
+    return symbol

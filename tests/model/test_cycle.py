@@ -13,9 +13,8 @@ from model.cycle import (
     end_cycle,
     end_geometry,
     end_pressure,
-    volumetric_efficiency,
-    volumetric_efficiency_from_temperatures,
 )
+from model.efficiency import volumetric_efficiency, volumetric_efficiency_from_temperatures
 from model.machine import End, Side
 from model.stage import gas_path, isentropic_discharge_temperature
 from model.valves import full_lift_loss, plate_loss

@@ -150,11 +150,19 @@ def reversal_angle(load: Any, tension: float, compression: float) -> float:
     return max(minor) * 2 * np.pi / count
 
 
+def reversal_crossings(load: Any, tension: float, compression: float) -> float:
+    """Walks round the turn and counts how often pull follows on push or push on pull."""
+    dead = 0.002 * max(tension, compression)
+    signs = [1 if value > dead else -1 for value in load if abs(value) > dead]
+    return float(sum(a != b for a, b in zip(signs, signs[1:] + signs[:1], strict=True)))
+
+
 def own_functions(gas: GasSurface) -> Mapping[str, Callable[..., Any]]:
     plain: dict[str, Callable[..., Any]] = {
         "exp": np.exp, "log": np.log, "sqrt": np.sqrt, "sin": np.sin, "cos": np.cos, "acos": np.arccos,
         "abs": np.abs, "max": np.maximum, "min": np.minimum, "sum": np.sum, "where": np.where,
-        "plate": plate, "reversal_angle": reversal_angle,
+        "plate": plate, "reversal_angle": reversal_angle, "reversal_crossings": reversal_crossings,
+        "below": lambda a, b: a < b,
     }  # fmt: skip
     look_ups: dict[str, Callable[..., Any]] = {
         "rho": gas.density, "h": gas.enthalpy, "s": gas.entropy, "T_of_s": gas.temperature_from_entropy,
