@@ -9,6 +9,7 @@ from rich.padding import Padding
 from rich.table import Table
 from rich.text import Text
 
+from agent.database import PAGE_SIZE
 from agent.siteplan.errors import SiteFileError
 from agent.siteplan.load import load_site
 from agent.siteplan.nameplate import piston_speed_m_s
@@ -23,8 +24,8 @@ from model.quantities import QUANTITIES
 # A stored input is a value, its quality and its age; a stored result a value and its quality.
 _INPUT_BYTES: Final = 4 + 1 + 4
 _RESULT_BYTES: Final = 4 + 1
-# What a row costs beside its values (time, headers, unused ends of pages); a test measures it.
-_ROW_BYTES: Final = 18
+# What a row costs beside its values (time, headers); a test measures it.
+_ROW_BYTES: Final = 16
 _DAY_S: Final = 86_400
 
 
@@ -223,7 +224,12 @@ def bytes_per_day(plan: UnitPlan) -> tuple[int, int]:
     """Projected growth of the series store by one unit [bytes a day]: its inputs, its results."""
     inputs = _ROW_BYTES + _INPUT_BYTES * len(plan.inputs)
     results = _ROW_BYTES + _RESULT_BYTES * len(plan.result_names())
-    return _DAY_S * inputs, _DAY_S * results
+    return round(_DAY_S * _on_pages(inputs)), round(_DAY_S * _on_pages(results))
+
+
+def _on_pages(row: int) -> float:
+    """Bytes a row takes with its part of what whole rows leave unused of a page."""
+    return max(row, PAGE_SIZE / max(PAGE_SIZE // row, 1))
 
 
 def _store(plan: SitePlan) -> Iterator[str]:

@@ -27,7 +27,7 @@ CACHE_FOLDER: Final = "cache"  # of gas surfaces
 
 BUSY_TIMEOUT_S: Final = 5.0
 # Frames of some hundred columns waste least of a page of this size. It can only be set on an empty file.
-_PAGE_SIZE: Final = 8192
+PAGE_SIZE: Final = 8192
 # The log file shrinks back to this after a checkpoint that a slow reader had held up.
 _LOG_LIMIT_BYTES: Final = 64 * 1024 * 1024
 
@@ -171,7 +171,7 @@ def open_for_writing(
             timeout=busy_timeout_s, check_same_thread=False,
         )  # fmt: skip
         if create:
-            connection.execute(f"PRAGMA page_size = {_PAGE_SIZE}")
+            connection.execute(f"PRAGMA page_size = {PAGE_SIZE}")
             _check(connection, path, schema)
             connection.execute("PRAGMA journal_mode = WAL")
             _migrate(connection, path, schema)

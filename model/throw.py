@@ -118,7 +118,7 @@ def run_throw(cylinder: Cylinder, frame: Frame, held_open: dict[Side, Mask], ang
     flow: Array = np.zeros(turns.size)
     full = swept = power = flow
     for run in runs:
-        grid = _grid(run.end, frame.stroke_m, frame.rod_m, angles)
+        grid = turn_grid(run.end, frame.stroke_m, frame.rod_m, angles)
         trace, opening = _grid_pressure(run, grid, frame)
         traces.append(trace)
         openings.append(opening)
@@ -153,7 +153,7 @@ def opening_angles(cylinder: Cylinder, frame: Frame, held_open: dict[Side, Mask]
     """Crank angles (frames, openings) at which valves open, where the loads have corners. [rad]"""
     found = []
     for run in end_runs(cylinder, frame, held_open):
-        grid = _grid(run.end, frame.stroke_m, frame.rod_m, ANGLES)
+        grid = turn_grid(run.end, frame.stroke_m, frame.rod_m, ANGLES)
         found.append(_grid_pressure(run, grid, frame)[1])
     return np.concatenate(found, axis=1)
 
@@ -224,7 +224,9 @@ def _loads(
 
 
 @dataclass(frozen=True, slots=True, eq=False, kw_only=True)
-class _Grid:
+class TurnGrid:
+    """One end at equal steps of a turn, and which of them are its suction stroke and its discharge stroke."""
+
     geometry: EndGeometry
     suction: slice
     discharge: slice
@@ -236,14 +238,15 @@ def _angles(count: int) -> Array:
 
 
 @lru_cache(maxsize=256)
-def _grid(end: End, stroke_m: float, rod_m: float, count: int) -> _Grid:
+def turn_grid(end: End, stroke_m: float, rod_m: float, count: int) -> TurnGrid:
+    """Volumes and rates of an end at equal steps of a turn; kept, as they never change."""
     first, second = slice(0, count // 2), slice(count // 2, count)
     suction, discharge = (first, second) if end.side is Side.HEAD else (second, first)
     geometry = end_geometry(_angles(count), end, stroke_m, rod_m)
-    return _Grid(geometry=geometry, suction=suction, discharge=discharge)
+    return TurnGrid(geometry=geometry, suction=suction, discharge=discharge)
 
 
-def _grid_pressure(run: EndRun, grid: _Grid, frame: Frame) -> tuple[Array, Array]:
+def _grid_pressure(run: EndRun, grid: TurnGrid, frame: Frame) -> tuple[Array, Array]:
     """Pressure (frames, angles) on the grid and the angles (frames, 2) at which the valves open."""
     shape, angles = grid.geometry, _angles(grid.geometry.volume.size)
     trace = np.empty((frame.speed_rad_s.shape[0], angles.size))
