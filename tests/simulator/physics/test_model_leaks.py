@@ -1,4 +1,4 @@
-"""Leaks as the model reckons them beside the same leaks of the plant: verification of one code by the other."""
+"""Leaks as the model reckons them beside those of the plant: verification of one code by the other."""
 
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass, replace
