@@ -18,7 +18,7 @@ from agent.siteplan.plan import SitePlan, UnitPlan
 from agent.siteplan.subjects import spoken
 from agent.storage.series import KEEP_DERIVED_S, KEEP_INPUTS_S
 from model import units
-from model.machine import Cylinder, End, EndState, LoadStep, Side
+from model.machine import Cylinder, End, EndState, LoadStep
 from model.quantities import QUANTITIES
 
 # A stored input is a value, its quality and its age; a stored result a value and its quality.
@@ -164,14 +164,22 @@ def _truth_table(plan: UnitPlan) -> Table:
     table = _table("load step", *(s.word if s.permitted else f"{s.word} (not permitted)" for s in steps))
     for cylinder in plan.unit.cylinders:
         for end in cylinder.ends:
-            states = [_state(step, cylinder.number, end.side) for step in steps]
+            states = [_state(step, cylinder.number, end) for step in steps]
             table.add_row(f"cylinder {cylinder.number} {end.side}", *states)
     return table
 
 
-def _state(step: LoadStep, number: int, side: Side) -> Text:
-    held = step.state(number, side) is EndState.HELD_OPEN
-    return Text("held open", style="bold") if held else Text("loaded")
+def _state(step: LoadStep, number: int, end: End) -> Text:
+    if step.state(number, end.side) is EndState.HELD_OPEN:
+        return Text("held open", style="bold")
+    said = ["loaded"]
+    added = step.added_clearance(number, end)
+    if added:
+        said.append(f"pockets + {100 * added:.1f} %")
+    closing = step.closing_rad(number, end.side)
+    if closing:
+        said.append(f"valves close at {units.format_with_unit(closing, 'deg', 'angle', 0)}")
+    return Text(", ".join(said), style="bold" if added or closing else "")
 
 
 def _limits(plan: UnitPlan, barometer_pa: float) -> Iterator[RenderableType]:

@@ -12,9 +12,11 @@ from typing import Any
 
 from agent.siteplan.alarm_settings import read_alarm_settings
 from agent.siteplan.document import Place, read_document
+from agent.siteplan.equipment import read_driver
 from agent.siteplan.errors import SiteFileError
 from agent.siteplan.inputs import read_flow_reference, read_inputs
-from agent.siteplan.nameplate import read_frame, read_gas, read_limits, read_load_steps, read_stages
+from agent.siteplan.load_steps import read_load_steps
+from agent.siteplan.nameplate import read_frame, read_gas, read_limits, read_stages
 from agent.siteplan.notices import unit_notices, unused_sources
 from agent.siteplan.plan import SitePlan, Source, SourceKind, UnitPlan
 from agent.siteplan.reader import Reader, closest
@@ -156,7 +158,9 @@ def _unit(
     frame = read_frame(reader, (*place, "frame")) if "frame" in keys else None
     gas = read_gas(reader, (*place, "gas")) if "gas" in keys else None
     stages = read_stages(reader, (*place, "stages"))
-    steps = read_load_steps(reader, (*place, "load_steps"), has)
+    steps = read_load_steps(reader, (*place, "load_steps"), has, stages)
+    driver = read_driver(reader, (*place, "driver"))
+    _check_stepless(reader, place)
     limits = read_limits(reader, (*place, "limits"), has)
     inputs = read_inputs(reader, (*place, "inputs"), has, sources, taken)
     flow_reference = read_flow_reference(reader, place, inputs)
@@ -177,11 +181,23 @@ def _unit(
         stages=stages,
         load_steps=steps,
         limits=limits,
+        driver=driver,
+        packing_vent_pa=block.packing_vent,
+        first_recycle="first" in block.recycles,
+        final_recycle="final" in block.recycles,
     )
     plan = UnitPlan(unit=unit, inputs=inputs, alarm_settings=alarms, flow_reference=flow_reference)
     for notice in unit_notices(plan):
         reader.notice(notice)
     return plan
+
+
+def _check_stepless(reader: Reader, place: Place) -> None:
+    if reader.at((*place, "stepless_valves")) in (True, "true"):
+        reader.fault(
+            (*place, "stepless_valves"), "a unit without stepless valve control",
+            "a closing angle that moves freely is not modelled; enter load steps with valves_close",
+        )  # fmt: skip
 
 
 def _check_load_step_input(reader: Reader, place: Place) -> None:

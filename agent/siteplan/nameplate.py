@@ -1,10 +1,11 @@
-"""Builds the nameplate of a unit: frame, gas, stages, cylinders, load steps and limits."""
+"""Builds the nameplate of a unit: frame, gas, stages, cylinders and limits."""
 
 import math
-from collections.abc import Mapping, Sequence
+from collections.abc import Mapping
 from dataclasses import replace
 
 from agent.siteplan.document import Place
+from agent.siteplan.equipment import read_stage_equipment
 from agent.siteplan.reader import Reader, closest
 from agent.siteplan.schema import (
     COMPONENTS,
@@ -13,11 +14,10 @@ from agent.siteplan.schema import (
     FrameBlock,
     GasBlock,
     LimitBlock,
-    LoadStepBlock,
     StageBlock,
 )
-from agent.siteplan.subjects import Declared, end, spoken
-from model.machine import Cylinder, End, GasDomain, Limit, LoadStep, Side, Stage
+from agent.siteplan.subjects import Declared, spoken
+from model.machine import Cylinder, End, GasDomain, Limit, OtherSide, Side, Stage
 from model.quantities import LOWER_LIMITS, QUANTITIES, UPPER_LIMITS, Quantity
 
 _SUM_TOLERANCE = 0.002
@@ -83,7 +83,8 @@ def read_stages(reader: Reader, place: Place) -> tuple[Stage, ...]:
         cylinders = [
             _read_cylinder(reader, (*here, "cylinders", k), seen) for k in range(len(block.cylinders))
         ]
-        stages.append(Stage(number=block.number, cylinders=tuple(c for c in cylinders if c is not None)))
+        sound = tuple(c for c in cylinders if c is not None)
+        stages.append(read_stage_equipment(reader, here, block, Stage(number=block.number, cylinders=sound)))
     return tuple(stages)
 
 
@@ -102,6 +103,7 @@ def _read_cylinder(reader: Reader, place: Place, seen: dict[int, Place]) -> Cyli
             reader.fault((*place, key), f"a rod smaller than the bore of {1000 * block.bore:g} mm")
     if reader.at((*place, "ends")) == {}:
         reader.fault((*place, "ends"), "an end: head, crank or both", value="")
+    _check_piston(reader, place, block)
     bare = Cylinder(
         number=block.number,
         bore_m=block.bore,
@@ -110,12 +112,29 @@ def _read_cylinder(reader: Reader, place: Place, seen: dict[int, Place]) -> Cyli
         reciprocating_mass_kg=block.reciprocating_mass,
         ends=(),
         valve_natural_frequency_hz=block.valve_natural_frequency,
+        crosshead_mass_kg=block.crosshead_mass or 0.0,
+        other_side=block.other_side or OtherSide.SUCTION,
+        distance_piece_pressure_pa=block.distance_piece,
     )
     ends = [
         _read_end(reader, (*place, "ends", side.value), bare, side) for side in Side if side in block.ends
     ]
     sound = tuple(end for end in ends if end is not None)
     return replace(bare, ends=sound) if len(reader.faults) == before else None
+
+
+def _check_piston(reader: Reader, place: Place, block: CylinderBlock) -> None:
+    if block.piston != "plain":
+        reader.fault(
+            (*place, "piston"), "a plain piston",
+            "pistons in tandem and step pistons join ends of several pressures on one rod: not modelled",
+        )  # fmt: skip
+    if block.other_side is not None and len(block.ends) != 1:
+        expected = "this key only with one end, where the other side has no valves"
+        reader.fault((*place, "other_side"), expected)
+    if block.crosshead_mass is not None and block.crosshead_mass >= block.reciprocating_mass:
+        expected = f"less than the reciprocating mass of {block.reciprocating_mass:g} kg, which includes it"
+        reader.fault((*place, "crosshead_mass"), expected)
 
 
 def _read_end(reader: Reader, place: Place, cylinder: Cylinder, side: Side) -> End | None:
@@ -137,45 +156,9 @@ def _read_end(reader: Reader, place: Place, cylinder: Cylinder, side: Side) -> E
         clearance=block.clearance,
         suction_area_ratio=block.suction_valve_area / piston,
         discharge_area_ratio=block.discharge_valve_area / piston,
+        pocket_clearance=block.pocket or 0.0,
+        variable_pocket_clearance=block.variable_pocket or 0.0,
     )
-
-
-def read_load_steps(reader: Reader, place: Place, has: Declared) -> tuple[LoadStep, ...]:
-    """The truth table: a word of the plant and the ends it holds open."""
-    steps: list[LoadStep] = []
-    seen: dict[str, Place] = {}
-    for index in range(reader.count(place)):
-        here = (*place, index)
-        block = reader.block(LoadStepBlock, here)
-        if block is None:
-            continue
-        if block.word in seen:
-            line = reader.document.line(seen[block.word])
-            reader.fault((*here, "word"), "each word once in a unit", f"line {line} has it already")
-        seen.setdefault(block.word, (*here, "word"))
-        held = _held_open(reader, (*here, "held_open"), block.held_open, has)
-        steps.append(LoadStep(word=block.word, index=index, held_open=held, permitted=block.permitted))
-    if steps and len(steps) == reader.count(place) and not any(step.permitted for step in steps):
-        reader.fault(place, "a load step that is permitted", value="")
-    return tuple(steps)
-
-
-def _held_open(
-    reader: Reader, place: Place, words: Sequence[str], has: Declared
-) -> frozenset[tuple[int, Side]]:
-    held: set[tuple[int, Side]] = set()
-    for index, word in enumerate(words):
-        named = end(word)
-        if named is None:
-            reader.fault((*place, index), "an end, e.g. 'cylinder 1 head'")
-        elif named not in has.ends and has.sure:
-            known = [f"cylinder {number} {side}" for number, side in sorted(has.ends)]
-            reader.fault((*place, index), "an end that this unit has", f"it has {', '.join(known)}")
-        elif named in held:
-            reader.fault((*place, index), "each end once in a load step")
-        else:
-            held.add(named)
-    return frozenset(held)
 
 
 def read_limits(reader: Reader, place: Place, has: Declared) -> tuple[Limit, ...]:

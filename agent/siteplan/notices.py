@@ -52,13 +52,14 @@ def _inputs_left_out(plan: UnitPlan) -> Iterator[str]:
 
 
 def _steps(plan: UnitPlan) -> Iterator[str]:
-    if all(step.held_open for step in plan.unit.load_steps):
+    if all(step.held_open or step.valve_closings for step in plan.unit.load_steps):
         yield "no load step has every end loaded"
-    seen: dict[frozenset[object], str] = {}
+    seen: dict[tuple[object, ...], str] = {}
     for step in plan.unit.load_steps:
-        twin = seen.setdefault(frozenset(step.held_open), step.word)
+        does = (step.held_open, step.pockets_open, step.pocket_positions, step.valve_closings)
+        twin = seen.setdefault(does, step.word)
         if twin != step.word:
-            yield f"load steps {twin} and {step.word} hold the same ends open"
+            yield f"load steps {twin} and {step.word} do the same to every end"
 
 
 def _table_ranges(plan: UnitPlan) -> Iterator[str]:

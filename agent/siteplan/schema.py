@@ -16,6 +16,7 @@ from pydantic import AfterValidator, BaseModel, BeforeValidator, ConfigDict, Fie
 from agent.siteplan.errors import ValueRefusedError
 from agent.siteplan.plan import MqttVersion, SourceKind
 from model import units
+from model.machine import DriverKind, OtherSide
 
 SCHEMA: Final = 1  # the newest form of the file that this version reads
 
@@ -84,6 +85,27 @@ def _clearance(value: Any, info: ValidationInfo) -> float:
     return _fraction(value, info, "a clearance above 0 % and up to 300 % of the swept volume", 1e-9, 3.0)
 
 
+def _pocket(value: Any, info: ValidationInfo) -> float:
+    expected = "what a pocket adds, above 0 % and up to 300 % of the swept volume"
+    return _fraction(value, info, expected, 1e-9, 3.0)
+
+
+def _part(value: Any, info: ValidationInfo) -> float:
+    return _fraction(value, info, "a share from 0 % to 100 %", 0.0, 1.0)
+
+
+def _loss(value: Any) -> float:
+    expected = "pressure loss / (density x volume flow^2) of the stage, above 0, e.g. 250 1/m4"
+    match = (
+        re.fullmatch(r"([0-9]+(?:\.[0-9]+)?(?:e[0-9]+)?) ?1/m4", value.strip())
+        if isinstance(value, str)
+        else None
+    )
+    if match is None or not 0 < float(match[1]) < 1e12:
+        raise ValueRefusedError(expected)
+    return float(match[1])
+
+
 def _share(value: Any, info: ValidationInfo) -> float:
     return _fraction(value, info, "a mole fraction from 0 to 1", 0.0, 1.0)
 
@@ -91,7 +113,10 @@ def _share(value: Any, info: ValidationInfo) -> float:
 def _fraction(value: Any, info: ValidationInfo, expected: str, low: float, high: float) -> float:
     number = _parsed(value, "fraction", info)
     if not low <= number <= high:
-        raise ValueRefusedError(expected, f"write {value.strip()} %" if high < number <= 100 * high else "")
+        bare = not value.strip().endswith("%")
+        raise ValueRefusedError(
+            expected, f"write {value.strip()} %" if bare and high < number <= 100 * high else ""
+        )
     return number
 
 
@@ -120,6 +145,13 @@ RatedSpeed = Annotated[float, _si("rotation", "50 rpm", "3600 rpm")]
 MovingMass = Annotated[float, _si("mass", "0.5 kg", "20000 kg")]
 ValveFrequency = Annotated[float, _si("frequency", "5 Hz", "2000 Hz")]
 ValveArea = Annotated[float, _si("area", "1 mm2", "1 m2")]
+Pocket = Annotated[float, BeforeValidator(_pocket)]
+Part = Annotated[float, BeforeValidator(_part)]
+Loss = Annotated[float, BeforeValidator(_loss)]
+ClosingAngle = Annotated[float, _si("angle", "0 deg", "180 deg")]
+RatedPower = Annotated[float, _si("power", "1 kW", "100 MW")]
+Friction = Annotated[float, _si("power", "0 kW", "10 MW")]
+DesignFlow = Annotated[float, _si("molar_flow", "0.01 mol/s", "1000000 mol/s")]
 Clearance = Annotated[float, BeforeValidator(_clearance)]
 Barometer = Annotated[float, _si("pressure", "0.6 bara", "1.1 bara")]
 Temperature = Annotated[float, _si("temperature", "100 K", "1000 K")]
@@ -177,6 +209,10 @@ class UnitBlock(Block):
     limits: list[Any] = []
     alarms: dict[str, Any] = {}
     flow_reference: Any = None
+    driver: Any = None
+    packing_vent: Pressure | None = None
+    recycles: list[Literal["first", "final"]] = []
+    stepless_valves: StrictBool = False
     inputs: Annotated[list[Any], Field(min_length=1)]
 
 
@@ -199,7 +235,38 @@ class GasBlock(Block):
 class StageBlock(Block):
     stand_ins = MappingProxyType({"cylinders": [None]})
     number: Count
+    service: Text | None = None
+    relief: Pressure | None = None
+    lowest_suction: Pressure | None = None
+    cooler: Any = None
+    suction_approach: Any = None
+    discharge_approach: Any = None
+    suction_taps: Count = 1
     cylinders: Annotated[list[Any], Field(min_length=1)]
+
+
+class CoolerBlock(Block):
+    stand_ins = MappingProxyType({"effectiveness": "1 %", "design_flow": "1 mol/s"})
+    effectiveness: Part
+    design_flow: DesignFlow
+    pressure_drop: Part = 0.0
+    knock_out: StrictBool = True
+
+
+class ApproachBlock(Block):
+    stand_ins = MappingProxyType({"tap": "-", "loss": "1 1/m4"})
+    tap: Text
+    loss: Loss
+
+
+class DriverBlock(Block):
+    stand_ins = MappingProxyType({"kind": "synchronous", "rated_power": "1 kW"})
+    kind: DriverKind
+    rated_power: RatedPower
+    mechanical_efficiency: Part | None = None
+    friction: Friction = 0.0
+    motor_efficiency: dict[str, Any] = {}
+    full_load_slip: Part = 0.0
 
 
 class CylinderBlock(Block):
@@ -216,7 +283,11 @@ class CylinderBlock(Block):
     bore: Bore
     rod: Rod
     tail_rod: Rod | None = None
+    piston: Literal["plain", "tandem", "step"] = "plain"
+    other_side: OtherSide | None = None
+    distance_piece: Pressure | None = None
     reciprocating_mass: MovingMass
+    crosshead_mass: MovingMass | None = None
     valve_natural_frequency: ValveFrequency
     ends: dict[Literal["head", "crank"], Any]
 
@@ -228,6 +299,8 @@ class EndBlock(Block):
     clearance: Clearance
     suction_valve_area: ValveArea
     discharge_valve_area: ValveArea
+    pocket: Pocket | None = None
+    variable_pocket: Pocket | None = None
 
 
 class LoadStepBlock(Block):
@@ -235,6 +308,10 @@ class LoadStepBlock(Block):
     word: Text
     held_open: list[Text]
     permitted: StrictBool = True
+    pockets_open: list[Text] = []
+    pocket_positions: dict[str, Part] = {}
+    valves_close: dict[str, ClosingAngle] = {}
+    lowest_suction: Pressure | None = None
 
 
 class LimitBlock(Block):

@@ -409,7 +409,7 @@ SPEED_SPAN = (
         ((SPEED_INPUT, SPEED_SPAN), "K-1: no speed input: the rated speed of 500 rpm is taken"),
         (
             (("held_open: [cylinder 1 head]", "held_open: []"),),
-            "K-1: load steps full and half hold the same ends open",
+            "K-1: load steps full and half do the same to every end",
         ),
         (
             # hand: 20 bara is 18.987 barg of a span of 30 barg, so 36.7 % is left out
